@@ -1,0 +1,293 @@
+"""What each asset is like: `rules/assets.csv`, and the published tables its rows are taken from."""
+
+from collections.abc import Iterable, Mapping
+from dataclasses import dataclass
+from functools import lru_cache
+from pathlib import Path
+from typing import Literal
+
+from pydantic import Field, ValidationInfo, field_validator, model_validator
+from pydantic_core import PydanticCustomError
+
+from keelbook.contracts.codes import NOT_APPLICABLE, TOTAL, CodeLists, Mark, load_code_lists
+from keelbook.contracts.loader import Declared, fault, faults, load_csv_rows
+from keelbook.contracts.parameters import Parameter
+from keelbook.errors import did_you_mean
+from keelbook.locate import folder
+
+REFERENCE_TABLES = ("bea_1997", "bea_structures", "bea_intellectual_property")
+"""Published rates shipped as they were read: `rules/<name>.csv`."""
+
+Efficiency = Literal["cohort_geometric", "geometric", "hyperbolic", "linear", "constant"]
+
+_NUMBERS = ("rate", "life", "declining_balance_rate", "gross_life", "b", "discount_rate")
+_NEEDS: Mapping[str, tuple[str, ...]] = {
+    "cohort_geometric": (),
+    "geometric": ("rate", "life", "retirement", "discount_rate"),
+    "hyperbolic": ("life", "b", "retirement", "discount_rate"),
+    "linear": ("life", "retirement", "discount_rate"),
+    "constant": ("life", "retirement", "discount_rate"),
+}
+_COHORT_MAY = ("rate", "life", "declining_balance_rate", "gross_life", "retirement")
+
+
+class AssetRow(Declared):
+    """One row of `rules/assets.csv`.
+
+    `life` is the life of the profile. A `cohort_geometric` row gives either `rate`, or `life` and
+    `declining_balance_rate` (rate = declining_balance_rate / life); its `gross_life` is the service life for
+    the gross stock, and with `rate` and `declining_balance_rate` the one the published rate rests on.
+    """
+
+    asset: str
+    industry: str
+    efficiency: Efficiency
+    rate: float | None = Field(None, gt=0, le=1)
+    life: float | None = Field(None, gt=0)
+    declining_balance_rate: float | None = Field(None, gt=0)
+    gross_life: float | None = Field(None, gt=0)
+    b: float | None = Field(None, le=1)
+    retirement: Literal["simultaneous"] | None = None
+    discount_rate: float | None = Field(None, gt=-1)
+    citation: str
+    status: Mark
+    line: int
+
+    @field_validator("asset", "industry")
+    @classmethod
+    def _known(cls, code: str, info: ValidationInfo) -> str:
+        lists: CodeLists = (info.context or {})["lists"]
+        name = str(info.field_name)
+        valid = [one for one in lists.codes(name) if one != NOT_APPLICABLE]
+        if code not in valid:
+            raise fault(
+                f"unknown {name} '{code}'",
+                found=code,
+                expected=f"a code of the list {name}",
+                remedy=did_you_mean(code, valid) or f"add the code in rules/codes/{name}.csv",
+            )
+        return code
+
+    @model_validator(mode="after")
+    def _no_contradiction(self) -> "AssetRow":
+        found = []
+        cohort = self.efficiency == "cohort_geometric"
+        needs = _NEEDS[self.efficiency]
+        may = _COHORT_MAY if cohort else needs
+        for name in (*_NUMBERS, "retirement"):
+            given = getattr(self, name) is not None
+            if given and name not in may:
+                found.append(
+                    fault(
+                        f"'{name}' contradicts {self.efficiency}",
+                        at=(name,),
+                        found=f"{name} {getattr(self, name)}",
+                        expected="one of: " + ", ".join(may),
+                        remedy=f"leave {name} empty, or choose another efficiency",
+                    )
+                )
+            elif name in needs and not given:
+                found.append(
+                    fault(
+                        f"{self.efficiency} without '{name}'",
+                        found="an empty cell",
+                        expected=name,
+                        remedy=f"give {name}, or choose another efficiency",
+                    )
+                )
+        if cohort:
+            found += self._cohort_faults()
+        if found:
+            raise faults(found)
+        return self
+
+    def _cohort_faults(self) -> list[PydanticCustomError]:
+        found = []
+        derived = self.life is not None and self.declining_balance_rate is not None
+        if self.rate is not None and self.life is not None:
+            found.append(
+                fault(
+                    "both a life and a rate",
+                    found=f"rate {self.rate:g}, life {self.life:g}",
+                    expected="rate, or life and declining_balance_rate",
+                    remedy="leave one empty; a service life for the gross stock goes to gross_life",
+                )
+            )
+        elif self.rate is None and not derived:
+            found.append(
+                fault(
+                    "cohort_geometric without a rate",
+                    found="an empty cell",
+                    expected="rate, or life and declining_balance_rate",
+                    remedy="give the rate",
+                )
+            )
+        elif self.rate is not None and self.declining_balance_rate is not None:
+            if self.gross_life is None:
+                found.append(
+                    fault(
+                        "a declining-balance rate without the life it goes with",
+                        found="an empty cell",
+                        expected="gross_life",
+                        remedy="give gross_life, or leave it out",
+                    )
+                )
+            elif not _agrees(self.rate, self.declining_balance_rate, self.gross_life):
+                found.append(
+                    fault(
+                        "rate, declining_balance_rate and gross_life contradict each other",
+                        found=f"rate {self.rate:g}",
+                        expected=f"{self.declining_balance_rate / self.gross_life:.4f} "
+                        "(declining_balance_rate / gross_life)",
+                        remedy="correct one of the three",
+                    )
+                )
+        if found:
+            return found
+        has_life = self.gross_life is not None or self.life is not None
+        if has_life != (self.retirement is not None):
+            found.append(
+                fault(
+                    "a life for the gross stock and a retirement go together",
+                    found=f"retirement {self.retirement or 'empty'}",
+                    expected="simultaneous" if has_life else "an empty cell",
+                    remedy="correct one",
+                )
+            )
+        return found
+
+
+class ReferenceRate(Declared):
+    """One row of a published table of depreciation rates. `exception` says why rate is not R / life."""
+
+    asset: str
+    period: str = ""
+    rate: float | None = Field(None, gt=0, le=1)
+    life: float | None = Field(None, gt=0)
+    declining_balance_rate: float | None = Field(None, gt=0)
+    category: str = ""
+    exception: str = ""
+    citation: str
+    status: Mark
+    line: int
+
+    @model_validator(mode="after")
+    def _identity(self) -> "ReferenceRate":
+        if self.rate is None or self.life is None or self.declining_balance_rate is None:
+            return self
+        if _agrees(self.rate, self.declining_balance_rate, self.life) == bool(self.exception):
+            raise fault(
+                "rate against declining_balance_rate / life",
+                found=f"{self.rate:g}, exception '{self.exception}'",
+                expected=f"{self.declining_balance_rate / self.life:.4f}, and an exception only otherwise",
+                remedy="correct the row, or say why it differs",
+            )
+        return self
+
+
+@dataclass(frozen=True)
+class AssetRule:
+    """How an asset is treated. `rate` is the rate in use, also where it follows from life and R."""
+
+    asset: str
+    industry: str
+    efficiency: Efficiency
+    rate: float | None
+    life: float | None
+    declining_balance_rate: float | None
+    gross_life: float | None
+    b: float | None
+    retirement: str | None
+    discount_rate: float | None
+    citation: str
+    status: Mark
+    file: str
+    line: int
+
+    def parameters(self) -> list[Parameter]:
+        """Return what a stock under this rule rests on, for the record."""
+        at = f"asset.{self.asset}.{self.industry}"
+        names = ("efficiency", *_NUMBERS, "retirement")
+        return [
+            Parameter(
+                f"{at}.{name}", getattr(self, name), self.file, self.line, f"{self.citation} [{self.status}]"
+            )
+            for name in names
+            if getattr(self, name) is not None
+        ]
+
+
+class AssetRules:
+    """The rules by asset and industry."""
+
+    def __init__(self, rules: Iterable[AssetRule], lists: CodeLists) -> None:
+        self._rules = {(rule.asset, rule.industry): rule for rule in rules}
+        self._lists = lists
+
+    def all(self) -> tuple[AssetRule, ...]:
+        """Return every rule."""
+        return tuple(self._rules.values())
+
+    def resolve(self, asset: str, industry: str) -> AssetRule | None:
+        """Return the most specific rule: of asset and industry, of the asset, then the same of its parents.
+
+        None if no rule covers it. Raises KeyError for an asset that is not in the code list.
+        """
+        code: str | None = asset
+        while code is not None:
+            for where in (industry, TOTAL):
+                if (code, where) in self._rules:
+                    return self._rules[code, where]
+            code = self._lists.parent("asset", code)
+        return None
+
+
+def load_asset_rules(assembly_folder: Path | None = None, lists: CodeLists | None = None) -> AssetRules:
+    """Return the rules of `rules/assets.csv`; an assembly's own rows replace the shipped ones of an asset.
+
+    Args:
+        assembly_folder: the assembly, or None for the shipped rules alone.
+        lists: its code lists, if they are loaded already.
+
+    Raises:
+        DeclarationError: a row is not as it must be or contradicts itself; every fault with its line.
+    """
+    lists = lists or load_code_lists(assembly_folder)
+    rules = _read(folder("rules") / "assets.csv", "keelbook/rules/assets.csv", lists)
+    own_file = assembly_folder / "rules" / "assets.csv" if assembly_folder else None
+    if own_file is not None and own_file.is_file():
+        own = _read(own_file, "rules/assets.csv", lists)
+        covered = {rule.asset for rule in own}
+        rules = [rule for rule in rules if rule.asset not in covered] + own
+    return AssetRules(rules, lists)
+
+
+@lru_cache(maxsize=8)
+def load_reference_rates(name: str) -> tuple[ReferenceRate, ...]:
+    """Return a published table of rates as shipped (`REFERENCE_TABLES`).
+
+    Raises:
+        DeclarationError: a row is not as it must be.
+    """
+    return tuple(load_csv_rows(folder("rules") / f"{name}.csv", ReferenceRate, key=("asset", "period")))
+
+
+def _read(path: Path, label: str, lists: CodeLists) -> list[AssetRule]:
+    rules = []
+    for row in load_csv_rows(path, AssetRow, key=("asset", "industry"), context={"lists": lists}):
+        given = row.model_dump()
+        if (
+            row.efficiency == "cohort_geometric"
+            and row.life is not None
+            and row.declining_balance_rate is not None
+        ):
+            given["rate"] = row.declining_balance_rate / row.life
+            given["gross_life"] = row.gross_life or row.life
+            given["life"] = None
+        rules.append(AssetRule(file=label, **given))
+    return rules
+
+
+def _agrees(rate: float, declining_balance_rate: float, life: float) -> bool:
+    """Published rates are printed to four decimals; half a unit of the last, and the noise of a division."""
+    return abs(declining_balance_rate / life - rate) <= 0.5e-4 + 1e-9

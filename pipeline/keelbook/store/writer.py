@@ -1,0 +1,253 @@
+"""Writing a panel: blocks become numbered series and thin figures; keys, formulas and parameters are interned."""
+
+import json
+from collections.abc import Iterable, Mapping
+from typing import Any
+
+import duckdb
+import numpy as np
+import pandas as pd
+
+from keelbook.blocks import DIMS, F8, I1, Block, BlockKey, Choice, Derivation, MethodSet, status_of
+from keelbook.contracts.codes import CodeLists
+from keelbook.contracts.measures import Measure
+from keelbook.contracts.tables import Table
+from keelbook.stages.catalogue import FORMULAS
+
+VIEWS = """
+create view panel as
+select s.area, s.sector, s.industry, s.asset, s.worker_group, cast(f.period as varchar) as time_period,
+       s.measure, s.method, s.price_basis, f.value, s.unit, s.unit_mult,
+       o.code as obs_status, c.code as conf_status, s.chosen,
+       1 - f.imputed_part - f.assumed_part as observed_part, f.imputed_part, f.assumed_part
+from figure f
+join series s using (series_id)
+join code o on o.list = 'obs_status' and o.position = f.obs_status
+join code c on c.list = 'conf_status' and c.position = f.conf_status;
+create view method_used as
+select s.series_id, p.* from series s join method_set m using (method_set) join parameter p using (parameter_id);
+"""
+
+
+class Writer:
+    """Writes the blocks of one area after another into a panel, and keeps the numbers given so far."""
+
+    def __init__(
+        self,
+        panel: duckdb.DuckDBPyConnection,
+        evidence: duckdb.DuckDBPyConnection,
+        tables: Mapping[str, Table],
+        lists: CodeLists,
+        measures: Mapping[str, Measure],
+        currency: Mapping[str, str],
+    ) -> None:
+        self._panel, self._evidence, self._tables = panel, evidence, tables
+        self._lists, self._measures, self._currency = lists, measures, currency
+        self._series_count = 0
+        self._formulas: dict[Derivation, int] = {}
+        self._sets: dict[MethodSet, int] = {}
+        self._parameters: dict[Choice, int] = {}
+        self._suppressed = lists.position("obs_status", "Q")
+        for name in PANEL_TABLES:
+            panel.execute(tables[name].create_sql())
+        evidence.execute(tables["withheld_figure"].create_sql())
+
+    def write(self, blocks: Iterable[Block]) -> None:
+        """Write the series, edges and figures of blocks that belong together; edges point within them."""
+        numbered: dict[BlockKey, tuple[Block, int]] = {}
+        for block in blocks:
+            numbered[block.key] = (block, self._series_count)
+            self._series_count += len(block.series)
+        if not numbered:
+            return
+        self.insert("series", pd.concat([self._series(b, at) for b, at in numbered.values()]))
+        edges = [frame for b, at in numbered.values() for frame in _edges(b, at, numbered)]
+        if edges:
+            self.insert("edge", pd.concat(edges))
+        figures = pd.concat([_figures(b, at) for b, at in numbered.values()])
+        hidden = figures["conf_status"].to_numpy() > 0
+        if hidden.any():
+            withheld = figures.loc[hidden, ["series_id", "period", "value"]]
+            _insert(self._evidence, self._tables["withheld_figure"], withheld, self._lists)
+            figures = figures.copy()
+            figures.loc[hidden, "value"] = np.nan
+            figures.loc[hidden, "obs_status"] = np.int8(self._suppressed)
+        self.insert("figure", figures)
+
+    def insert(self, name: str, frame: pd.DataFrame) -> None:
+        """Check a frame against the contract of its table and append it to the panel."""
+        _insert(self._panel, self._tables[name], frame, self._lists)
+
+    def finish(self) -> None:
+        """Write the tables that describe the figures, and the views."""
+        self.insert("formula", self._formula_rows())
+        self.insert("derivation", self._derivation_rows())
+        sets = [(number, self._parameter(c)) for s, number in self._sets.items() for c in s]
+        self.insert("method_set", pd.DataFrame(sets, columns=["method_set", "parameter_id"], dtype="int64"))
+        rows = [
+            (number, c.name, _as_text(c.value), c.file, c.line, c.citation)
+            for c, number in self._parameters.items()
+        ]
+        self.insert("parameter", _typed(rows, self._tables["parameter"]))
+        codes = [
+            (name, position, code, self._lists.name(name, code))
+            for name in self._lists.rows
+            for position, code in enumerate(self._lists.codes(name))
+        ]
+        self.insert("code", _typed(codes, self._tables["code"]))
+        self._panel.execute(VIEWS)
+
+    def _series(self, block: Block, first: int) -> pd.DataFrame:
+        n = len(block.series)
+        measure = self._measures[block.key.measure]
+        columns: dict[str, Any] = {"series_id": np.arange(first, first + n, dtype=np.int32)}
+        for dim in DIMS:
+            codes = block.series.digit(dim)
+            columns[dim] = pd.Categorical.from_codes(codes, list(block.series.table.codes[dim]))
+        for name, text in zip(("measure", "method", "price_basis"), block.key, strict=True):
+            columns[name] = _constant(text, n)
+        columns["unit"] = self._unit(block, measure)
+        columns["unit_mult"] = np.full(n, measure.unit_mult, np.int8)
+        columns["chosen"], columns["part"] = block.chosen, block.part
+        columns["formula_id"] = self._numbers(block.origin.derivations, self._formulas)[
+            block.origin.derivation
+        ]
+        for choices in block.origin.sets:
+            for choice in choices:
+                self._parameter(choice)
+        columns["method_set"] = self._numbers(block.origin.sets, self._sets)[block.origin.set]
+        return pd.DataFrame(columns)
+
+    def _unit(self, block: Block, measure: Measure) -> pd.Categorical:
+        if measure.unit != "currency":
+            return _constant(measure.unit, len(block.series))
+        areas = block.series.table.codes["area"]
+        names = [self._currency[area] for area in areas]
+        distinct = sorted(set(names))
+        position = np.array([distinct.index(name) for name in names])
+        return pd.Categorical.from_codes(position[block.series.digit("area")], distinct)
+
+    @staticmethod
+    def _numbers(items: Iterable[Any], known: dict[Any, int]) -> Any:
+        return np.array([known.setdefault(item, len(known)) for item in items], np.int32)
+
+    def _parameter(self, choice: Choice) -> int:
+        return self._parameters.setdefault(choice, len(self._parameters))
+
+    def _formula_rows(self) -> pd.DataFrame:
+        used: dict[str, set[str]] = {}
+        for choices in self._sets:
+            for choice in choices:
+                used.setdefault(choice.name, set())
+        rows = []
+        for derivation, number in self._formulas.items():
+            formula = FORMULAS[derivation.formula]
+            roles = ", ".join(role.name for role in formula.roles)
+            rows.append((number, formula.name, formula.equation, formula.citation, roles))
+        return _typed(rows, self._tables["formula"])
+
+    def _derivation_rows(self) -> pd.DataFrame:
+        rows = []
+        for derivation, number in self._formulas.items():
+            for position, link in enumerate(derivation.links):
+                key = link.input or BlockKey("", "", "")
+                project = ";".join(f"{dim}={code}" for dim, code in link.project)
+                rows.append((number, position, link.role, *key, link.kind, project, link.shift))
+        return _typed(rows, self._tables["derivation"])
+
+
+PANEL_TABLES = (
+    "series",
+    "figure",
+    "code",
+    "formula",
+    "derivation",
+    "edge",
+    "parameter",
+    "method_set",
+    "finding",
+    "build",
+    "stage_run",
+    "decomposition_input",
+    "decomposition",
+)
+
+
+def _constant(text: str, count: int) -> pd.Categorical:
+    return pd.Categorical.from_codes(np.zeros(count, np.int8), [text])
+
+
+def _as_text(value: Any) -> str:
+    return value if isinstance(value, str) else json.dumps(value)
+
+
+def _typed(rows: list[tuple[Any, ...]], table: Table) -> pd.DataFrame:
+    """Return rows as a frame with the column types of a contract, also when there are none."""
+    kinds = {"str": "str", "int": "int64", "float": "float64", "bool": "bool"}
+    frame = pd.DataFrame(rows, columns=list(table.column))
+    return frame.astype({name: kinds[column.type] for name, column in table.column.items()})
+
+
+def _edges(block: Block, first: int, numbered: Mapping[BlockKey, tuple[Block, int]]) -> list[pd.DataFrame]:
+    out = []
+    for role, edges in block.origin.edges.items():
+        target = np.full(len(block.series), -1, np.int64)
+        for i, key in enumerate(edges.blocks):
+            for number, at in _resolved(key, edges.key, numbered):
+                mine = (edges.which == i) & (edges.key >= 0) & (number >= 0) & (target < 0)
+                target[mine] = at + number[mine]
+        linked = np.flatnonzero(target >= 0)
+        out.append(
+            pd.DataFrame(
+                {
+                    "series_id": (first + linked).astype(np.int32),
+                    "period": pd.array([pd.NA] * len(linked), dtype="Int16"),
+                    "role": _constant(role, len(linked)),
+                    "input_series_id": target[linked].astype(np.int32),
+                }
+            )
+        )
+    return out
+
+
+def _resolved(key: BlockKey, wanted: Any, numbered: Mapping[BlockKey, tuple[Block, int]]) -> Iterable[Any]:
+    """Yield positions and first number of the wanted keys, in the block or the chosen series of all methods."""
+    for other, (block, at) in numbered.items():
+        if other.measure != key.measure or other.price_basis != key.price_basis:
+            continue
+        if other.method == key.method:
+            yield block.series.locate(wanted), at
+        elif key.method == "*":
+            position = block.series.locate(wanted)
+            known = position >= 0
+            position[known] = np.where(block.chosen[position[known]], position[known], -1)
+            yield position, at
+
+
+def _figures(block: Block, first: int) -> pd.DataFrame:
+    """Return the figures of a block series by series, so that one series lies together in the file."""
+    status = status_of(block).T
+    kept = np.isfinite(block.value.T) | ((status >= 0) & (block.status is not None))
+    series, period = np.nonzero(kept)
+
+    def column(x: F8 | I1 | Any, dtype: Any) -> Any:
+        return np.zeros(len(series), dtype) if x is None else x.T[kept].astype(dtype, copy=False)
+
+    return pd.DataFrame(
+        {
+            "series_id": (first + series).astype(np.int32),
+            "period": (block.periods.start + period).astype(np.int16),
+            "value": block.value.T[kept],
+            "obs_status": status[kept],
+            "conf_status": column(block.conf, np.int8),
+            "imputed_part": column(block.imputed, np.float32),
+            "assumed_part": column(block.assumed, np.float32),
+        }
+    )
+
+
+def _insert(con: duckdb.DuckDBPyConnection, table: Table, frame: pd.DataFrame, lists: CodeLists) -> None:
+    table.validate(frame.reset_index(drop=True), lists)
+    con.register("_frame", frame)
+    con.execute(f'insert into "{table.table}" by name select * from _frame')
+    con.unregister("_frame")
