@@ -250,15 +250,18 @@ def _full_status(blocks: Sequence[Block], order: I8) -> I1 | None:
     return np.concatenate([status_of(b) for b in blocks], axis=1)[:, order]
 
 
-NORMAL, ESTIMATED, MISSING, PROVISIONAL = 0, 3, 9, 11
-"""Positions of A, E, O and P in rules/codes/obs_status.csv (a test holds the file to them)."""
+NORMAL, ESTIMATED, PROVISIONAL = 0, 3, 11
+"""Positions of A, E and P in rules/codes/obs_status.csv (a test holds the file to them)."""
+
+NO_FIGURE = -1
+"""Status position of a cell that is not a figure at all: nothing was delivered, nothing could be computed."""
 
 
 def status_of(block: Block) -> I1:
-    """Return the status codes of a block in full: A where there is a value, O where there is none."""
+    """Return the status codes of a block in full: A where there is a value, else `NO_FIGURE`."""
     if block.status is not None:
         return block.status
-    return np.where(np.isnan(block.value), MISSING, NORMAL).astype(np.int8)
+    return np.where(np.isnan(block.value), NO_FIGURE, NORMAL).astype(np.int8)
 
 
 def _merge_origins(blocks: Sequence[Block], order: I8) -> Origin:

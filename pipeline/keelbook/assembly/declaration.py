@@ -2,7 +2,7 @@
 
 import codecs
 from collections.abc import Callable, Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from pathlib import Path, PurePosixPath
 from typing import Annotated, Any, Literal
 
@@ -554,8 +554,8 @@ class Assembly:
     note: str
     sources: tuple[Source, ...]
     rule_overrides: tuple[Parameter, ...]
-    lists: CodeLists
-    lines: Mapping[Place, int]
+    lists: CodeLists = field(repr=False)
+    lines: Mapping[Place, int] = field(repr=False)
 
     def line_of(self, source: str) -> int:
         """Return the line of a source's `[[source]]`. Raises KeyError for an unknown name."""

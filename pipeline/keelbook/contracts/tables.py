@@ -233,6 +233,8 @@ def _is_type(values: "pd.Series[Any]", kind: str) -> bool:
     import pandas as pd
 
     dtype: Any = values.dtype
+    if pd.api.types.is_object_dtype(dtype) and not len(values):  # an empty query result has no types
+        return True
     if kind == "str":
         if isinstance(dtype, pd.CategoricalDtype):
             return len(dtype.categories) == 0 or pd.api.types.infer_dtype(dtype.categories) == "string"

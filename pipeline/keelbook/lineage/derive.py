@@ -13,6 +13,7 @@ import numpy as np
 from keelbook.blocks import (
     B1,
     ESTIMATED,
+    NO_FIGURE,
     F4,
     F8,
     I1,
@@ -31,9 +32,6 @@ from keelbook.blocks import (
 )
 from keelbook.lineage.formula import Formula, Role, Setting, values_of
 from keelbook.lineage.primitives import Either, Groups, Rule
-
-NO_FIGURE = -1
-"""Status position of a cell that is not a figure at all (nothing was delivered, nothing could be computed)."""
 
 
 @dataclass(frozen=True)

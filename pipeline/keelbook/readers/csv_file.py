@@ -171,7 +171,7 @@ def _records(file: _File) -> Iterator[_Record]:
         start = file.csv.header_line
         try:
             for fields in reader:
-                if any(field.strip() for field in fields):
+                if any(fields):
                     yield _Record(start, fields, "".join(seen).rstrip("\r\n"))
                 start = file.csv.header_line + reader.line_num
                 seen.clear()
@@ -246,24 +246,24 @@ def _stage_plain(
         )
     except (duckdb.InvalidInputException, duckdb.ConversionException):
         return None
-    inside = " + ".join(
-        f"coalesce(length({name}) - length(replace({name}, chr(10), '')), 0)" for name in names
-    )
-    empty = " and ".join(f"coalesce(trim({name}), '') = ''" for name in names)
-    records, newlines, blank = con.execute(
-        f"select count(*), sum(case when {' or '.join(f'contains({n}, chr(10))' for n in names)} "
-        f"then {inside} else 0 end), count(*) filter (where {empty}) "
-        f"from {TABLE}"
-    ).fetchall()[0]
-    if blank or survey.lines != 1 + records + (newlines or 0):
+    empty = " and ".join(f"{name} is null" for name in names)
+    records, blank = con.execute(f"select count(*), count(*) filter (where {empty}) from {TABLE}").fetchall()[
+        0
+    ]
+    if blank:
         return None
     row = "rowid + 2"
-    if newlines:
+    if survey.lines != 1 + records:
+        # Each record takes a line at least, so equality proves one line each; else newlines stand in quotes.
+        inside = " + ".join(f"coalesce(length({n}) - length(replace({n}, chr(10), '')), 0)" for n in names)
         con.execute(
             f"create or replace temp table {TABLE} as select *, 2 + rowid + coalesce(sum({inside}) over "
-            f'(order by rowid rows between unbounded preceding and 1 preceding), 0) as "row" '
-            f"from {TABLE} order by rowid"
+            f'(order by rowid rows between unbounded preceding and 1 preceding), 0) as "row", '
+            f"{inside} as newlines from {TABLE} order by rowid"
         )
+        newlines = con.execute(f"select coalesce(sum(newlines), 0) from {TABLE}").fetchall()[0][0]
+        if survey.lines != 1 + records + newlines:
+            return None
         row = '"row"'
     return Staged(
         roles={role: names[j] for role, j in columns.items()},

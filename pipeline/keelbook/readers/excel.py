@@ -173,6 +173,7 @@ def _sheet_members(archive: zipfile.ZipFile) -> dict[str, str]:
 
 def _read_grid(path: Path, archive: zipfile.ZipFile, name: str, member: str) -> Grid:
     content = archive.read(member)
+    expat.ParserCreate().Parse(content, True)  # calamine reads on past damaged markup without a word
     last_row, last_column = 0, 0
     for letters, digits in set(_ADDRESS.findall(content)):
         last_row, last_column = max(last_row, int(digits)), max(last_column, _column(letters.decode()))

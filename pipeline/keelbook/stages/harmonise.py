@@ -14,6 +14,7 @@ from keelbook.blocks import (
     I1,
     I4,
     I8,
+    NO_FIGURE,
     Block,
     BlockKey,
     Choice,
@@ -24,7 +25,7 @@ from keelbook.blocks import (
     merge,
 )
 from keelbook.contracts.measures import Measure
-from keelbook.lineage.derive import NO_FIGURE, Given, derive, given, in_year
+from keelbook.lineage.derive import Given, derive, given, in_year
 from keelbook.lineage.formula import Formula, Role, Setting
 from keelbook.lineage.primitives import Each, Span, Spans
 from keelbook.stages.base import Result, note

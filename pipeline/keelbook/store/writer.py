@@ -227,7 +227,7 @@ def _resolved(key: BlockKey, wanted: Any, numbered: Mapping[BlockKey, tuple[Bloc
 def _figures(block: Block, first: int) -> pd.DataFrame:
     """Return the figures of a block series by series, so that one series lies together in the file."""
     status = status_of(block).T
-    kept = np.isfinite(block.value.T) | ((status >= 0) & (block.status is not None))
+    kept = np.isfinite(block.value.T) | (status >= 0)
     series, period = np.nonzero(kept)
 
     def column(x: F8 | I1 | Any, dtype: Any) -> Any:

@@ -23,7 +23,9 @@ class Whole(Declared):
     @model_validator(mode="after")
     def _ordered(self) -> "Whole":
         if self.low > self.high:
-            raise fault("low is above high", at=("low",), found=f"{self.low:g}", expected=f"up to {self.high:g}")
+            raise fault(
+                "low is above high", at=("low",), found=f"{self.low:g}", expected=f"up to {self.high:g}"
+            )
         return self
 
 
@@ -80,7 +82,9 @@ def test_unknown_key_below_a_free_name(tmp_path: Path) -> None:
 
 
 def test_unknown_value_names_the_nearest(tmp_path: Path) -> None:
-    (problem,) = refused(tmp_path, 'name = "x"\nparts = [\n  { size = 1 },\n  { size = 1, kind = "sqare" },\n]\n')
+    (problem,) = refused(
+        tmp_path, 'name = "x"\nparts = [\n  { size = 1 },\n  { size = 1, kind = "sqare" },\n]\n'
+    )
     assert problem.place == "line 4"
     assert problem.expected == "one of: round, square"
     assert problem.remedy == "did you mean 'square'?"
@@ -119,7 +123,11 @@ def test_an_unknown_key_does_not_hide_a_contradiction(tmp_path: Path) -> None:
 
 @pytest.mark.parametrize(
     ("text", "line"),
-    [('name = "x"\nlow = \n', "line 2"), ('name = "x"\n[parts\n', "line 2"), ('name = "x"\nname = "y"\n', "line 2")],
+    [
+        ('name = "x"\nlow = \n', "line 2"),
+        ('name = "x"\n[parts\n', "line 2"),
+        ('name = "x"\nname = "y"\n', "line 2"),
+    ],
 )
 def test_not_toml_names_the_line(tmp_path: Path, text: str, line: str) -> None:
     (problem,) = refused(tmp_path, text)
