@@ -21,7 +21,10 @@ class Identity:
 def identify(assembly: Assembly, paths: dict[str, Path]) -> Identity:
     """Return the identity of the build that the assembly's files would give now."""
     sources = _hash([(name, paths[name]) for name in sorted(paths)])
-    declared = [("assembly.toml", assembly.folder / "assembly.toml"), *_files(assembly.folder / "rules", "own")]
+    declared = [
+        ("assembly.toml", assembly.folder / "assembly.toml"),
+        *_files(assembly.folder / "rules", "own"),
+    ]
     rules = _hash([*declared, *_files(folder("rules"), "rules"), *_files(folder("schemas"), "schemas")])
     package = Path(__file__).resolve().parents[1]
     code = _hash([(str(path.relative_to(package)), path) for path in sorted(package.rglob("*.py"))])

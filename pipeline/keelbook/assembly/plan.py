@@ -1,12 +1,12 @@
 """The plan of a production: the parameters of every stage, resolved from the rules of the assembly."""
 
 from collections.abc import Mapping
-from functools import lru_cache
+from functools import cache
 from typing import Any
 
 from keelbook.assembly.declaration import Assembly
-from keelbook.blocks import Choice, CodeTable, MethodSet
 from keelbook.blocks import DIMS as DIMENSIONS
+from keelbook.blocks import Choice, CodeTable, MethodSet
 from keelbook.contracts.assets import AssetRules, load_asset_rules
 from keelbook.contracts.loader import parse_toml
 from keelbook.contracts.measures import load_measures
@@ -99,7 +99,7 @@ def as_choice(parameter: Parameter) -> Choice:
 def asset_sets(rules: AssetRules) -> Any:
     """Return the function from (asset, industry) to the parameters of its stocks, None without a rule."""
 
-    @lru_cache(maxsize=None)
+    @cache
     def of(asset: str, industry: str) -> MethodSet | None:
         rule = rules.resolve(asset, industry)
         if rule is None:

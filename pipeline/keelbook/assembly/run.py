@@ -158,7 +158,7 @@ def _unchanged(assembly: Assembly, identity: Identity, now: Path, log: Log, stri
         found = con.execute("select * exclude (finding_id) from finding order by finding_id").df()
         stages = con.execute("select * from stage_run order by position").df()
     found = findings.frame(found)
-    _raise_if_refused(found, strict, now)
+    raise_if_refused(found, strict, now)
     return Report(assembly, identity, now, True, found, pd.DataFrame(), stages, log.seconds)
 
 
@@ -293,7 +293,7 @@ def _refused(found: pd.DataFrame, strict: bool) -> pd.DataFrame:
     return found[found["severity"].isin(blocking)]
 
 
-def _raise_if_refused(found: pd.DataFrame, strict: bool, where: Path) -> None:
+def raise_if_refused(found: pd.DataFrame, strict: bool, where: Path) -> None:
     blocking = _refused(found, strict)
     if len(blocking):
         raise StopFindings([as_problem(row) for row in blocking.to_dict("records")])
@@ -320,7 +320,7 @@ def _stop_if_refused(
     log.say("refused", findings=len(everything))
     (work / generations.LOG).write_text("\n".join(log.lines) + "\n", encoding="utf-8")
     generations.refuse(work, out)
-    _raise_if_refused(everything, strict, out)
+    raise_if_refused(everything, strict, out)
 
 
 def _numbered(found: pd.DataFrame) -> pd.DataFrame:

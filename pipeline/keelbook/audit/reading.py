@@ -207,7 +207,9 @@ class Build:
         return [c for (c,) in self.rows("select code from code where list = ? order by position", (name,))]
 
     def _formula(self, formula_id: int) -> tuple[str, str, str]:
-        return self.rows("select name, equation, citation from formula where formula_id = ?", (formula_id,))[0]  # type: ignore[return-value]
+        return self.rows("select name, equation, citation from formula where formula_id = ?", (formula_id,))[
+            0
+        ]  # type: ignore[return-value]
 
     def _links(self, formula_id: int) -> tuple[Link, ...]:
         rows = self.rows(
@@ -216,7 +218,8 @@ class Build:
             (formula_id,),
         )
         return tuple(
-            Link(*row[:5], dict(part.split("=") for part in row[5].split(";") if part), row[6]) for row in rows
+            Link(*row[:5], dict(part.split("=") for part in row[5].split(";") if part), row[6])
+            for row in rows
         )
 
     def _choices(self, method_set: int) -> tuple[Choice, ...]:
@@ -255,4 +258,3 @@ def projected(key: Mapping[str, str], project: Mapping[str, str], link: Link) ->
 def with_method(key: dict[str, Any], method: str) -> dict[str, Any]:
     """Return the condition for one method, or for the chosen series of whatever method."""
     return {**key, "chosen": True} if method == "*" else {**key, "method": method}
-

@@ -78,9 +78,10 @@ def find(build: Build, measure: str, wanted: Mapping[str, str | None]) -> Series
             Problem(
                 f"{len(found)} series of {measure} fit",
                 str(build.path),
-                expected="one of: " + "; ".join(s.label for s in found[:8]) + ("; ..." if len(found) > 8 else ""),
-                remedy="add one of "
-                + " ".join(f"--{name.replace('_', '-')}" for name in _differing(found)),
+                expected="one of: "
+                + "; ".join(s.label for s in found[:8])
+                + ("; ..." if len(found) > 8 else ""),
+                remedy="add one of " + " ".join(f"--{name.replace('_', '-')}" for name in _differing(found)),
             )
         )
     return found[0]

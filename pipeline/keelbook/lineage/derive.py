@@ -13,12 +13,12 @@ import numpy as np
 from keelbook.blocks import (
     B1,
     ESTIMATED,
-    NO_FIGURE,
     F4,
     F8,
     I1,
     I4,
     I8,
+    NO_FIGURE,
     NORMAL,
     PROVISIONAL,
     Block,

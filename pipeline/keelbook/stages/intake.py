@@ -458,7 +458,7 @@ def _stack(
         for part, start, end in zip(taken, ends[:-1], ends[1:], strict=True):
             column = part.texts[name]
             own = np.array([position.get(label, -1) for label in column.labels], dtype=joined.dtype)
-            joined[start:end] = own[column.codes]
+            joined[start:end] = own[column.codes] if len(own) > 1 else own[0]
         columns[name] = pd.Categorical.from_codes(
             joined, dtype=pd.CategoricalDtype(categories), validate=False
         )
