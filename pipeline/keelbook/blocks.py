@@ -75,7 +75,7 @@ class SeriesIndex:
         return self.key // self.table.strides[dim] % len(self.table.codes[dim])
 
     def is_code(self, dim: str, code: str) -> B1:
-        return self.digit(dim) == self.table.position(dim, code)
+        return np.asarray(self.digit(dim) == self.table.position(dim, code), bool)
 
     def projected(self, project: Mapping[str, str]) -> I8:
         """Return the keys with the named dimensions set to the given codes; not sorted, not unique."""
@@ -180,6 +180,11 @@ class Block:
         if self.value.shape != shape:
             raise ValueError(f"{self.key}: values have shape {self.value.shape}, periods x series is {shape}")
         self.value.flags.writeable = False
+
+    @property
+    def held(self) -> B1:
+        """Return which series have a figure in any period, shape (N,)."""
+        return np.asarray(np.isfinite(self.value).any(axis=0))
 
     def take(self, which: B1 | I8) -> "Block":
         """Return the block with some of its series, in ascending key order."""

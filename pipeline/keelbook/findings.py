@@ -40,7 +40,7 @@ def frame(records: Iterable[Mapping[str, Any]] | pd.DataFrame = ()) -> pd.DataFr
             out[name] = column.fillna("").astype("str") if dtype == "str" else column.astype("Int64")
         else:
             empty: Any = "" if dtype == "str" else pd.NA
-            out[name] = pd.Series([empty] * len(given), dtype=dtype)  # type: ignore[call-overload]
+            out[name] = pd.Series([empty] * len(given), dtype=dtype)
     return out
 
 

@@ -23,6 +23,7 @@ from keelbook.contracts.parameters import load_parameters
 from keelbook.contracts.screening_rules import load_screening_rules
 from keelbook.contracts.tables import Table, load_tables
 from keelbook.errors import Problem, StopFindings
+from keelbook.frames import coded, constant
 from keelbook.stages import panel
 from keelbook.stages.base import Book, Inputs
 from keelbook.stages.catalogue import STAGES
@@ -261,14 +262,14 @@ def _write_observations(
         n = len(item.block.series)
         series = {
             "observation_series_id": np.arange(first, first + n, dtype=np.int32),
-            "source": pd.Categorical.from_codes(np.zeros(n, np.int8), [item.source]),
-            "measure": pd.Categorical.from_codes(np.zeros(n, np.int8), [item.block.key.measure]),
+            "source": constant(item.source, n),
+            "measure": constant(item.block.key.measure, n),
             **{
-                dim: pd.Categorical.from_codes(item.block.series.digit(dim), list(codes))
+                dim: coded(item.block.series.digit(dim), codes)
                 for dim, codes in item.block.series.table.codes.items()
             },
-            "price_basis": pd.Categorical.from_codes(np.zeros(n, np.int8), [item.block.key.price_basis]),
-            "frequency": pd.Categorical.from_codes(np.zeros(n, np.int8), [item.frequency]),
+            "price_basis": constant(item.block.key.price_basis, n),
+            "frequency": constant(item.frequency, n),
             "unit_mult": np.full(n, item.unit_mult, np.int8),
         }
         rows = pd.DataFrame(

@@ -207,9 +207,9 @@ class Build:
         return [c for (c,) in self.rows("select code from code where list = ? order by position", (name,))]
 
     def _formula(self, formula_id: int) -> tuple[str, str, str]:
-        return self.rows("select name, equation, citation from formula where formula_id = ?", (formula_id,))[
-            0
-        ]  # type: ignore[return-value]
+        sql = "select name, equation, citation from formula where formula_id = ?"
+        name, equation, citation = self.rows(sql, (formula_id,))[0]
+        return name, equation, citation
 
     def _links(self, formula_id: int) -> tuple[Link, ...]:
         rows = self.rows(
@@ -218,8 +218,8 @@ class Build:
             (formula_id,),
         )
         return tuple(
-            Link(*row[:5], dict(part.split("=") for part in row[5].split(";") if part), row[6])
-            for row in rows
+            Link(role, measure, method, basis, kind, _pairs(project), shift)
+            for role, measure, method, basis, kind, project, shift in rows
         )
 
     def _choices(self, method_set: int) -> tuple[Choice, ...]:
@@ -235,6 +235,11 @@ class Build:
             return {}
         rows = self._evidence.execute("select series_id, period, value from withheld_figure").fetchall()
         return {(number, period): value for number, period, value in rows}
+
+
+def _pairs(text: str) -> dict[str, str]:
+    """Return the projection written as `dim=code;dim=code`."""
+    return dict(part.split("=", 1) for part in text.split(";") if part)
 
 
 def _value(text: str) -> Any:

@@ -109,22 +109,16 @@ def _columns(block: Block, columns: I8) -> _Lined:
 
 
 def _overlay(base: _Lined, part: _Lined, columns: I8) -> _Lined:
-    value = base.value.copy()
-    value[:, columns] = part.value
-    names = ("status", "conf", "imputed", "assumed")
-    rest = {}
-    for name in names:
-        old, new = getattr(base, name), getattr(part, name)
-        if old is None and new is None:
-            rest[name] = None
-            continue
-        full = (
-            np.zeros(value.shape, new.dtype if new is not None else old.dtype) if old is None else old.copy()
-        )
-        if new is not None:
-            full[:, columns] = new
-        rest[name] = full
-    return _Lined(value, **rest)
+    """Return the first with some of its columns replaced by the second."""
+
+    def over(old: Any, new: Any) -> Any:
+        if new is None:
+            return old
+        full = np.zeros(base.value.shape, new.dtype) if old is None else old.copy()
+        full[:, columns] = new
+        return full
+
+    return _Lined(*(over(getattr(base, f.name), getattr(part, f.name)) for f in fields(base)))
 
 
 def _repeated(x: _Lined, row: int) -> _Lined:

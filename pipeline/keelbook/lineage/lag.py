@@ -1,6 +1,6 @@
 """`Lag`: what is left, at the end of a period, of the flows of that and earlier periods and of an opening stock."""
 
-from collections.abc import Callable, Iterator, Sequence
+from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
 
 import numpy as np
@@ -84,44 +84,36 @@ class Lag:
         """Return the weighted sums for a flow that is zero wherever it is not alive."""
         T, N = flow.shape
         y = np.empty((T, N))
-        geometric = [isinstance(k, GeometricKernel) for k in self.kernels]
-        recursive = np.asarray(geometric, bool)[self.which] if N else np.zeros(0, bool)
-        if recursive.any():
-            columns: slice | B1 = slice(None) if recursive.all() else recursive
-            members = self.which[columns]
-            first, second, keep, base = (
-                np.array([getattr(k, name, np.nan) for k in self.kernels])[members]
-                for name in ("first", "second", "keep", "of_opening")
-            )
-            x = flow[:, columns]
-            out = np.empty_like(x)
-            older = np.zeros(x.shape[1])
-            for t in range(T):
-                out[t] = first * x[t] + older
-                older = keep * older + second * x[t]
-            _add_opening(
-                out,
-                at_opening[columns],
-                o[columns],
-                lambda n, c: second[c] / base[c] * keep[c] ** np.arange(n)[:, None],
-            )
-            y[:, columns] = out
+        recursive = np.zeros(N, bool)
         for i, kernel in enumerate(self.kernels):
-            if isinstance(kernel, TableKernel):
-                columns = self.which == i
-                if columns.any():
-                    out = cohort_stock(
-                        np.ascontiguousarray(flow[:, columns]), kernel.weights(min(T, len(kernel.table)))
-                    )
-                    rate = growth[columns]
-                    _add_opening(
-                        out,
-                        at_opening[columns],
-                        o[columns],
-                        lambda n, c, k=kernel, g=rate: k.remainder(g[c], n),
-                    )
-                    y[:, columns] = out
+            mine = self.which == i
+            if isinstance(kernel, GeometricKernel):
+                recursive |= mine
+            elif mine.any():
+                y[:, mine] = _tabled(kernel, flow[:, mine], at_opening[mine], growth[mine], o[mine])
+        if recursive.all():
+            y = self._recursed(self.which, flow, at_opening, o)
+        elif recursive.any():
+            y[:, recursive] = self._recursed(
+                self.which[recursive], flow[:, recursive], at_opening[recursive], o[recursive]
+            )
         return np.where(live, y, np.nan)
+
+    def _recursed(self, which: I4, flow: F8, opening: F8, o: I8) -> F8:
+        """Return the sums of all series with geometric weights, whatever their rates, in one pass over time."""
+        first, second, keep, base = (
+            np.array([getattr(k, name, np.nan) for k in self.kernels])[which]
+            for name in ("first", "second", "keep", "of_opening")
+        )
+        y = np.empty(flow.shape)
+        older = np.zeros(flow.shape[1])
+        for t in range(len(flow)):
+            y[t] = first * flow[t] + older
+            older = keep * older + second * flow[t]
+        for start, columns, count in _starts(o, len(flow)):
+            left = second[columns] / base[columns] * keep[columns] ** np.arange(count)[:, None]
+            y[start + 1 :, columns] += left * opening[columns]
+        return y
 
     def compute(self, *x: F8) -> F8:
         flow, opening, growth = x
@@ -143,8 +135,12 @@ class Lag:
             if of_flow is None and of_opening is None:
                 out.append(None)
                 continue
-            flow_part = np.zeros_like(size) if of_flow is None else size * of_flow
-            opening_part = np.zeros_like(size0) if of_opening is None else size0 * of_opening[o, n]
+            flow_part = np.zeros_like(size) if of_flow is None else np.asarray(size * of_flow, np.float64)
+            opening_part = (
+                np.zeros_like(size0)
+                if of_opening is None
+                else np.asarray(size0 * of_opening[o, n], np.float64)
+            )
             out.append(_ratio(self._apply(flow_part, opening_part, g, o, live), bottom, y))
         return out
 
@@ -164,10 +160,16 @@ class Lag:
         return float(np.sum([t.contribution for t in terms]))
 
 
-def _add_opening(y: F8, opening: F8, o: I8, remainder: Callable[[int, B1], F8]) -> None:
-    """Add what is left of each series' opening figure to the periods after it, in place."""
+def _tabled(kernel: TableKernel, flow: F8, opening: F8, growth: F8, o: I8) -> F8:
+    """Return the sums of series that share one table of weights."""
+    y = cohort_stock(np.ascontiguousarray(flow), kernel.weights(min(len(flow), len(kernel.table))))
+    for start, columns, count in _starts(o, len(flow)):
+        y[start + 1 :, columns] += kernel.remainder(growth[columns], count) * opening[columns]
+    return y
+
+
+def _starts(o: I8, periods: int) -> Iterator[tuple[int, B1, int]]:
+    """Yield each opening period, the series that open there, and how many periods follow."""
     for start in np.unique(o):
-        columns = o == start
-        count = len(y) - int(start) - 1
-        if count > 0:
-            y[int(start) + 1 :, columns] += remainder(count, columns) * opening[columns]
+        if periods - int(start) > 1:
+            yield int(start), o == start, periods - int(start) - 1

@@ -184,11 +184,10 @@ class Groups:
     def reduce(self, x: F8) -> F8:
         """Sum columns by group in ascending column order, (T, M) -> (T, size); a NaN part makes a NaN total."""
         if np.all(np.diff(self.of) >= 0):
-            order, of = slice(None), self.of
+            ordered, of = x, self.of
         else:
             order = np.argsort(self.of, kind="stable")
-            of = self.of[order]
-        ordered = x[:, order]
+            ordered, of = x[:, order], self.of[order]
         starts = np.flatnonzero(np.r_[True, np.diff(of) > 0]) if len(of) else np.zeros(0, np.int64)
         out = np.full((len(x), self.size), np.nan)
         if len(of):
@@ -329,7 +328,7 @@ class Span:
             yield Term(0, row, n, v, w, w * v)
 
     def combine(self, x: Sequence[F8], terms: Sequence[Term]) -> float:
-        return float(self.outer(np.float64(np.sum([t.contribution for t in terms]))))
+        return float(self.outer(np.asarray(np.sum([t.contribution for t in terms]))))
 
 
 class Spans(NamedTuple):

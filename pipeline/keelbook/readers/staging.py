@@ -144,4 +144,6 @@ def _text_column(con: duckdb.DuckDBPyConnection, column: str) -> TextColumn:
         f"select coalesce(enum_code({column}::staged_text)::integer, {len(labels)}) as code from {TABLE}"
     ).fetchnumpy()["code"]
     con.execute("drop type staged_text")
-    return TextColumn((*labels, ""), np.ascontiguousarray(codes).astype(np.int32, copy=False))
+    if not len(codes) or codes.max() == len(labels):
+        labels.append("")
+    return TextColumn(tuple(labels), np.ascontiguousarray(codes).astype(np.int32, copy=False))

@@ -103,7 +103,7 @@ def run(inputs: Inputs, params: DeflationParams) -> Result:
     if delivered is not None:
         volume = volume.take(delivered.series.locate(volume.series.key) < 0)
     findings.extend(_missing_years(current, volume))
-    return Result((volume.take(np.isfinite(volume.value).any(axis=0)), year_end), findings)
+    return Result((volume.take(volume.held), year_end), findings)
 
 
 def _no_price(block: Block, n: int) -> dict[str, Any]:

@@ -167,7 +167,7 @@ def _scatter(frame: pd.DataFrame, table: CodeTable, years: range, params: Harmon
         raise ValueError(f"{first['source']}: two observations for one figure")
 
     def spread(name: str, empty: float, dtype: type) -> NDArray[Any]:
-        full = np.full(shape, empty, dtype)
+        full: NDArray[Any] = np.full(shape, empty, dtype)
         full.ravel()[at] = frame[name].to_numpy()[rows]
         return full
 
@@ -268,7 +268,7 @@ def _incomplete_years(item: ObservedBlock, block: Block) -> Iterator[dict[str, A
     if item.frequency != "Q":
         return
     there = np.isfinite(item.block.value).reshape(len(block.periods), QUARTERS, -1)
-    partial = there.any(axis=1) & ~there.all(axis=1)
+    partial = np.asarray(there.any(axis=1) & ~there.all(axis=1))
     for n in np.flatnonzero(partial.any(axis=0)):
         years = [block.periods[t] for t in np.flatnonzero(partial[:, n])]
         yield note(

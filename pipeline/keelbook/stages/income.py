@@ -189,7 +189,7 @@ def _labour_incomes(
             chosen=False,
             part=base.part,
         )
-        out[name] = block.take(np.isfinite(block.value).any(axis=0))
+        out[name] = block.take(block.held)
     return out
 
 

@@ -7,6 +7,7 @@ import numpy as np
 import pandas as pd
 
 from keelbook.blocks import F8, Block, BlockKey, SeriesIndex
+from keelbook.frames import coded
 from keelbook.stages import decomposition
 from keelbook.stages.base import CHOSEN, Book
 from keelbook.stages.totals import TOTAL
@@ -46,7 +47,8 @@ def inputs_of(book: Book) -> pd.DataFrame:
         name: _values(book.get(key), series, project, len(periods)) for name, (key, project) in INPUTS.items()
     }
     missing = {WORDS[name]: np.isnan(columns[name]) for name in REQUIRED}
-    missing["a capital stock or capital services"] = np.isnan([columns[name] for name in CAPITAL]).all(axis=0)
+    no_capital = np.isnan([columns[name] for name in CAPITAL]).all(axis=0)
+    missing["a capital stock or capital services"] = np.asarray(no_capital)
     shown = np.isfinite(list(columns.values())).any(axis=0)
     ready = shown & ~np.any(list(missing.values()), axis=0)
     reason = np.where(ready, "", "no ").astype(object)
@@ -122,8 +124,8 @@ def _values(block: Block | None, series: SeriesIndex, project: Mapping[str, str]
 def _labelled(series: SeriesIndex, periods: range, shown: Any) -> pd.DataFrame:
     column, row = np.nonzero(shown.T)
     labels = {
-        dim: pd.Categorical.from_codes(series.digit(dim)[column], list(series.table.codes[dim]))
+        dim: coded(series.digit(dim)[column], series.table.codes[dim])
         for dim in ("area", "sector", "industry")
     }
-    years = pd.Categorical.from_codes(row, [str(p) for p in periods])
+    years = coded(row, [str(p) for p in periods])
     return pd.DataFrame({**labels, "time_period": years})

@@ -248,7 +248,8 @@ def _elementary(net: Block, whole: Mapping[BlockKey, Block], params: ServicesPar
 
 def _services(average: Block, cost: Block, net: Block, params: ServicesParams) -> list[Block]:
     """Return growth, index and composition for every industry and for the total of each area and sector."""
-    growths, out = [], []
+    growths: list[Block] = []
+    out: list[Block] = []
     for project in ({"asset": TOTAL}, {"asset": TOTAL, "industry": TOTAL}):
         series = outer_series(average, project)
         done = np.concatenate([g.series.key for g in growths]) if growths else np.zeros(0, np.int64)
@@ -320,7 +321,7 @@ def _negative(cost: Block) -> list[dict[str, Any]]:
 
 def _no_rate(rate: Block, income: Block) -> list[dict[str, Any]]:
     out = []
-    for n in np.flatnonzero(~np.isfinite(rate.value).any(axis=0)):
+    for n in np.flatnonzero(~rate.held):
         out.append(
             note(
                 "no_rate_of_return",

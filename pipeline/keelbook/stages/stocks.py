@@ -145,9 +145,9 @@ def _steady_state(measure: str) -> Callable[[Setting], Each]:
                     continue
                 if isinstance(k, GeometricKernel):
                     mine &= growth.real + (1 - k.keep) > 0
-                    rate = np.float64(1 - k.keep)
+                    rate = np.asarray(1 - k.keep)
                     out[mine] = opening_stock_geometric(
-                        investment[mine], growth[mine], np.float64(k.first), rate
+                        investment[mine], growth[mine], np.asarray(k.first), rate
                     )
                 else:
                     out[mine] = opening_stock_profile(investment[mine], growth[mine], k.stock)
@@ -338,9 +338,9 @@ def _no_start(
     out = []
     rate = np.array([_geometric_rate({c.name: c.value for c in s}) for s in sets])
     g = np.where(np.isfinite(growth.value), growth.value, 0).sum(axis=0)
-    lost = ~np.isfinite(growth.value).any(axis=0)
+    lost = ~growth.held
     never = ~lost & (g + rate[which] <= 0)
-    for n in np.flatnonzero((lost | never) & np.isfinite(investment.value).any(axis=0)):
+    for n in np.flatnonzero((lost | never) & investment.held):
         why = (
             "the trend window has fewer years than declared, or investment that is not above zero"
             if lost[n]
@@ -369,7 +369,7 @@ def _geometric_rate(choices: Mapping[str, Any]) -> float:
 def _broken_off(investment: Block, net: Block) -> list[dict[str, Any]]:
     """Return a finding per series that has investment after a year without: its stocks end at the gap."""
     after = np.isfinite(investment.value) & np.isnan(net.value)
-    started = np.isfinite(net.value).any(axis=0)
+    started = net.held
     out = []
     for n in np.flatnonzero(after.any(axis=0) & started):
         last = int(np.flatnonzero(np.isfinite(net.value[:, n]))[-1])

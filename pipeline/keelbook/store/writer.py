@@ -12,6 +12,7 @@ from keelbook.blocks import DIMS, F8, I1, Block, BlockKey, Choice, Derivation, M
 from keelbook.contracts.codes import CodeLists
 from keelbook.contracts.measures import Measure
 from keelbook.contracts.tables import Table
+from keelbook.frames import coded, constant
 from keelbook.stages.catalogue import FORMULAS
 
 VIEWS = """
@@ -103,9 +104,9 @@ class Writer:
         columns: dict[str, Any] = {"series_id": np.arange(first, first + n, dtype=np.int32)}
         for dim in DIMS:
             codes = block.series.digit(dim)
-            columns[dim] = pd.Categorical.from_codes(codes, list(block.series.table.codes[dim]))
+            columns[dim] = coded(codes, block.series.table.codes[dim])
         for name, text in zip(("measure", "method", "price_basis"), block.key, strict=True):
-            columns[name] = _constant(text, n)
+            columns[name] = constant(text, n)
         columns["unit"] = self._unit(block, measure)
         columns["unit_mult"] = np.full(n, measure.unit_mult, np.int8)
         columns["chosen"], columns["part"] = block.chosen, block.part
@@ -118,14 +119,14 @@ class Writer:
         columns["method_set"] = self._numbers(block.origin.sets, self._sets)[block.origin.set]
         return pd.DataFrame(columns)
 
-    def _unit(self, block: Block, measure: Measure) -> pd.Categorical:
+    def _unit(self, block: Block, measure: Measure) -> "pd.Categorical[Any]":
         if measure.unit != "currency":
-            return _constant(measure.unit, len(block.series))
+            return constant(measure.unit, len(block.series))
         areas = block.series.table.codes["area"]
         names = [self._currency[area] for area in areas]
         distinct = sorted(set(names))
         position = np.array([distinct.index(name) for name in names])
-        return pd.Categorical.from_codes(position[block.series.digit("area")], distinct)
+        return coded(position[block.series.digit("area")], distinct)
 
     @staticmethod
     def _numbers(items: Iterable[Any], known: dict[Any, int]) -> Any:
@@ -173,10 +174,6 @@ PANEL_TABLES = (
 )
 
 
-def _constant(text: str, count: int) -> pd.Categorical:
-    return pd.Categorical.from_codes(np.zeros(count, np.int8), [text])
-
-
 def _as_text(value: Any) -> str:
     return value if isinstance(value, str) else json.dumps(value)
 
@@ -202,7 +199,7 @@ def _edges(block: Block, first: int, numbered: Mapping[BlockKey, tuple[Block, in
                 {
                     "series_id": (first + linked).astype(np.int32),
                     "period": pd.array([pd.NA] * len(linked), dtype="Int16"),
-                    "role": _constant(role, len(linked)),
+                    "role": constant(role, len(linked)),
                     "input_series_id": target[linked].astype(np.int32),
                 }
             )

@@ -190,7 +190,9 @@ def test_cells_in_are_observations_and_rejected_and_missing(tmp_path: Path) -> N
     assert set(result.findings["level"]) == {0}
     assert [math.isnan(value) for value in result.observations["value"]] == [False, True]
     con.register("observed", result.observations[["cell_id"]])
-    kept = con.execute("select raw from source_cell join observed using (cell_id) order by cell_id").fetchall()
+    kept = con.execute(
+        "select raw from source_cell join observed using (cell_id) order by cell_id"
+    ).fetchall()
     assert kept == [("1",), ("",)]
 
 
