@@ -72,16 +72,26 @@ def stage_params(assembly: Assembly, parameters: Parameters) -> Mapping[str, Any
         "stocks": StocksParams(
             asset_sets(load_asset_rules(assembly.folder, assembly.lists)),
             choice("capital", "timing"),
+            choice("capital", "age_price_mode"),
+            choice("capital", "initial_stock"),
             choice("capital", "trend_window"),
             order,
         ),
         "labour": LabourParams(assembly.reference_year),
         "income": IncomeParams(
+            choice("income", "net_taxes"),
             choice("income", "cascade"),
             choice("income", "mixed_income_labour_fraction"),
             choice("income", "relative_earnings"),
         ),
-        "services": ServicesParams(choice("services", "rate_scope"), order, reference_year),
+        "services": ServicesParams(
+            choice("services", "rate_of_return"),
+            choice("services", "rate_scope"),
+            choice("services", "holding_gains"),
+            choice("services", "productive_stock_timing"),
+            order,
+            reference_year,
+        ),
         "shares": SharesParams(choice("shares", "smoothing_years")),
         "decomposition": DecompositionParams(
             choice("decomposition", "form"),

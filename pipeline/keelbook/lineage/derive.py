@@ -279,14 +279,10 @@ def _confidentiality(lined: list[_Lined], value: F8, groups: Groups, formula: Fo
         return None
     out = np.zeros(value.shape, np.int8)
     for conf in hidden:
-        if len(conf) != len(value):
-            per_period = conf.reshape(len(value), -1, conf.shape[1]).max(axis=1)
-        else:
-            per_period = conf
+        whole = conf.reshape(len(value), -1, conf.shape[1]).max(axis=1)
         if formula.kind == "group":
-            per_period = groups.reduce(per_period.astype(np.float64)).clip(0, 127)
-            per_period = np.where(np.nan_to_num(per_period) > 0, 1, 0)
+            whole = (np.nan_to_num(groups.reduce((whole > 0).astype(np.float64))) > 0).astype(np.int8)
         elif formula.kind == "series":
-            per_period = np.maximum.accumulate(per_period, axis=0)
-        out = np.maximum(out, per_period.astype(np.int8))
+            whole = np.maximum.accumulate(whole, axis=0)
+        out = np.maximum(out, whole)
     return out

@@ -8,7 +8,7 @@ import pandas as pd
 from keelbook.assembly.run import Report, as_problem
 from keelbook.audit.reading import Build
 from keelbook.outputs.decomposition import averages
-from keelbook.outputs.text import number, percent, plural, shown
+from keelbook.outputs.text import percent, plural, shown
 
 SHOWN_FINDINGS = 3
 WORDS = {
@@ -37,9 +37,9 @@ def summary(report: Report, place: Path) -> list[str]:
     else:
         counts = report.counts.sum(numeric_only=True)
         lines.append(
-            f"Read       {plural(len(report.counts), 'source')}: {number(counts['cells'])} cells = "
-            f"{number(counts['observations'])} observations + {number(counts['rejected'])} rejected + "
-            f"{number(counts['missing'])} declared missing"
+            f"Read       {plural(len(report.counts), 'source')}: {int(counts['cells']):,} cells = "
+            f"{int(counts['observations']):,} observations + {int(counts['rejected']):,} rejected + "
+            f"{int(counts['missing']):,} declared missing"
         )
     for row in report.stages.to_dict("records"):
         if row["stage"] in WORDS and row["figures"]:

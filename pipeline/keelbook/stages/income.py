@@ -95,6 +95,7 @@ OVER_INDUSTRIES = "sum_of_industries"
 
 @dataclass(frozen=True)
 class IncomeParams:
+    net_taxes: Choice
     cascade: Choice
     mixed_income_labour_fraction: Choice
     relative_earnings: Choice
@@ -111,7 +112,7 @@ def run(inputs: Inputs, params: IncomeParams) -> Result:
             if b is None
         ]
         return Result([_from_delivered(delivered)] if delivered is not None else (), gap)
-    base, findings = _base(inputs, value_added)
+    base, findings = _base(inputs, value_added, params)
     blocks: list[Block] = [base]
     forms = _labour_incomes(inputs, params, base, compensation)
     chosen = choose(base, forms, params.cascade.value)
@@ -134,7 +135,7 @@ def _from_delivered(share_block: Block) -> Block:
     )
 
 
-def _base(inputs: Inputs, value_added: Block) -> tuple[Block, list[dict[str, Any]]]:
+def _base(inputs: Inputs, value_added: Block, params: IncomeParams) -> tuple[Block, list[dict[str, Any]]]:
     taxes = inputs.get(NET_TAXES)
     if taxes is None:
         return (
@@ -147,6 +148,7 @@ def _base(inputs: Inputs, value_added: Block) -> tuple[Block, list[dict[str, Any
         value_added.series,
         value_added.periods,
         {"value_added": given(value_added), "net_taxes": given(taxes)},
+        sets=((params.net_taxes,),),
         chosen=False,
         part=value_added.part,
     )

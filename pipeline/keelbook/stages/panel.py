@@ -33,7 +33,7 @@ CAPITAL = ("capital_services", "productive_stock", "net_stock")
 WORDS = {
     "value_added_volume": "value added in volume",
     "hours_worked": "hours worked",
-    "capital_share": "a capital share",
+    "capital_share": "capital share",
 }
 
 
@@ -48,15 +48,13 @@ def inputs_of(book: Book) -> pd.DataFrame:
     }
     missing = {WORDS[name]: np.isnan(columns[name]) for name in REQUIRED}
     no_capital = np.isnan([columns[name] for name in CAPITAL]).all(axis=0)
-    missing["a capital stock or capital services"] = np.asarray(no_capital)
+    missing["capital stock or services"] = np.asarray(no_capital)
     shown = np.isfinite(list(columns.values())).any(axis=0)
     ready = shown & ~np.any(list(missing.values()), axis=0)
-    reason = np.where(ready, "", "no ").astype(object)
-    first = np.ones(ready.shape, bool)
+    reason = np.full(ready.shape, "", dtype=object)
     for words, gone in missing.items():
-        text = np.where(first, words, ", no " + words)
-        reason = np.where(gone & shown, reason + text, reason)
-        first &= ~gone
+        text = np.where(reason == "", f"no {words}", reason + f", no {words}")
+        reason = np.where(gone & shown, text, reason)
     frame = _labelled(series, periods, shown)
     for name, values in columns.items():
         frame[name] = values.T[shown.T]

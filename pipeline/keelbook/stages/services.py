@@ -153,7 +153,10 @@ FORMULAS = (
 
 @dataclass(frozen=True)
 class ServicesParams:
+    rate_of_return: Choice
     rate_scope: Choice
+    holding_gains: Choice
+    productive_stock_timing: Choice
     deflation_order: Choice
     reference_year: Choice
 
@@ -183,7 +186,7 @@ def run(inputs: Inputs, params: ServicesParams) -> Result:
             "revaluation": given(gains),
             "asset_base": given(base),
         },
-        sets=((params.rate_scope,),),
+        sets=((params.rate_of_return, params.rate_scope),),
         part=False,
     )
     cost = derive(
@@ -206,6 +209,7 @@ def run(inputs: Inputs, params: ServicesParams) -> Result:
         productive.series,
         productive.periods,
         {"productive_stock_previous": given(productive), "productive_stock": given(productive)},
+        sets=((params.productive_stock_timing,),),
         part=productive.part,
     )
     user_cost = derive(
@@ -240,7 +244,7 @@ def _elementary(net: Block, whole: Mapping[BlockKey, Block], params: ServicesPar
         net.series,
         net.periods,
         {"year_end_price": year_end, "year_end_price_previous": year_end, "asset_base": given(base)},
-        sets=sets,
+        sets=((params.holding_gains, params.deflation_order),),
         part=net.part,
     )
     return {"asset_base": base, "revaluation": gain}

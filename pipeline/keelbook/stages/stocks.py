@@ -207,6 +207,8 @@ class StocksParams:
 
     assets: Callable[[str, str], MethodSet | None]
     timing: Choice
+    age_price_mode: Choice
+    initial_stock: Choice
     trend_window: Choice
     deflation_order: Choice
 
@@ -221,7 +223,7 @@ def run(inputs: Inputs, params: StocksParams) -> Result:
     covered = which >= 0
     investment, which = investment.take(covered), which[covered]
     periods, series = investment.periods, investment.series
-    method = (params.trend_window,)
+    method = (params.initial_stock, params.trend_window)
     start = {
         measure: derive(
             formula,
@@ -317,7 +319,7 @@ def _choices(
                 }
             )
             continue
-        chosen = (*found, params.timing)
+        chosen = (*found, params.timing, params.age_price_mode)
         of_pair[i] = sets.setdefault(chosen, len(sets))
     return tuple(sets), of_pair[pair.ravel()], findings
 

@@ -1,0 +1,1 @@
+"""Makes `small_blocks` importable from every folder of unit tests."""
