@@ -134,13 +134,42 @@ class Choice:
 MethodSet = tuple[Choice, ...]
 
 
+OWN_PERIOD = -32768
+
+
 @dataclass(frozen=True, eq=False)
 class Edges:
-    """For one role, the input series of every output series: a block (by position) and a key, -1 for none."""
+    """For one role, the input series of every output series: a block (by position) and a key, -1 for none.
+
+    period: the period that is read for every output period, where the data decide on it; `OWN_PERIOD`, or None
+    for all series: the output's own.
+    """
 
     blocks: tuple[BlockKey, ...]
     which: I4
     key: I8
+    period: I8 | None = None
+
+
+@dataclass(frozen=True, eq=False)
+class Fills:
+    """Figures put into gaps, one entry each: column and period of the figure, and the two periods it rests on."""
+
+    block: BlockKey
+    column: I8
+    period: I8
+    before: I8
+    after: I8
+
+    def take(self, which: B1 | I8, count: int) -> "Fills":
+        """Return the entries of some of `count` columns, renumbered."""
+        new = np.full(count, -1, np.int64)
+        kept = np.arange(count)[which]
+        new[kept] = np.arange(len(kept))
+        mine = new[self.column] >= 0
+        return Fills(
+            self.block, new[self.column[mine]], self.period[mine], self.before[mine], self.after[mine]
+        )
 
 
 @dataclass(frozen=True, eq=False)
@@ -152,6 +181,7 @@ class Origin:
     sets: tuple[MethodSet, ...]
     set: I4
     edges: Mapping[str, Edges] = field(default_factory=dict)
+    fills: Fills | None = None
 
 
 @dataclass(frozen=True, eq=False)
@@ -192,12 +222,17 @@ class Block:
         def columns(x: Any) -> Any:
             return None if x is None else x[:, which]
 
-        edges = {role: Edges(e.blocks, e.which[which], e.key[which]) for role, e in self.origin.edges.items()}
+        edges = {
+            role: Edges(e.blocks, e.which[which], e.key[which], None if e.period is None else e.period[which])
+            for role, e in self.origin.edges.items()
+        }
+        fills = self.origin.fills
         origin = replace(
             self.origin,
             derivation=self.origin.derivation[which],
             set=self.origin.set[which],
             edges=edges,
+            fills=None if fills is None else fills.take(which, len(self.series)),
         )
         return replace(
             self,
@@ -273,34 +308,55 @@ def _merge_origins(blocks: Sequence[Block], order: I8) -> Origin:
     derivations: list[Derivation] = []
     sets: list[MethodSet] = []
     derivation, which_set = [], []
-    roles = {role for b in blocks for role in b.origin.edges}
-    targets: dict[str, list[BlockKey]] = {role: [] for role in roles}
-    which: dict[str, list[I4]] = {role: [] for role in roles}
-    keys: dict[str, list[I8]] = {role: [] for role in roles}
     for b in blocks:
         derivation.append(b.origin.derivation + np.int32(len(derivations)))
         which_set.append(b.origin.set + np.int32(len(sets)))
         derivations.extend(b.origin.derivations)
         sets.extend(b.origin.sets)
-        for role in roles:
-            edges = b.origin.edges.get(role)
-            n = len(b.series)
-            if edges is None:
-                which[role].append(np.zeros(n, np.int32))
-                keys[role].append(np.full(n, -1, np.int64))
-            else:
-                which[role].append(edges.which + np.int32(len(targets[role])))
-                keys[role].append(edges.key)
-                targets[role].extend(edges.blocks)
+    roles = {role: None for b in blocks for role in b.origin.edges}
     return Origin(
         tuple(derivations),
         np.concatenate(derivation)[order],
         tuple(sets),
         np.concatenate(which_set)[order],
-        {
-            role: Edges(
-                tuple(targets[role]), np.concatenate(which[role])[order], np.concatenate(keys[role])[order]
-            )
-            for role in roles
-        },
+        {role: _merge_edges(blocks, role, order) for role in roles},
+        _merge_fills(blocks, order),
+    )
+
+
+def _merge_edges(blocks: Sequence[Block], role: str, order: I8) -> Edges:
+    targets: list[BlockKey] = []
+    which, keys, periods = [], [], []
+    for b in blocks:
+        n = len(b.series)
+        edges = b.origin.edges.get(role) or Edges((), np.zeros(n, np.int32), np.full(n, -1, np.int64))
+        which.append(edges.which + np.int32(len(targets)))
+        keys.append(edges.key)
+        periods.append(np.full(n, OWN_PERIOD) if edges.period is None else edges.period)
+        targets.extend(edges.blocks)
+    period = np.concatenate(periods)[order]
+    return Edges(
+        tuple(targets),
+        np.concatenate(which)[order],
+        np.concatenate(keys)[order],
+        period if (period != OWN_PERIOD).any() else None,
+    )
+
+
+def _merge_fills(blocks: Sequence[Block], order: I8) -> Fills | None:
+    if all(b.origin.fills is None for b in blocks):
+        return None
+    place = np.empty(len(order), np.int64)
+    place[order] = np.arange(len(order))
+    parts, first = [], 0
+    for b in blocks:
+        if b.origin.fills is not None:
+            parts.append(replace(b.origin.fills, column=place[first + b.origin.fills.column]))
+        first += len(b.series)
+    return Fills(
+        parts[0].block,
+        *(
+            np.concatenate([getattr(part, name) for part in parts])
+            for name in ("column", "period", "before", "after")
+        ),
     )

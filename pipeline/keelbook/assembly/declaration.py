@@ -674,7 +674,7 @@ def _unknown_measure(name: str, at: Place = ()) -> PydanticCustomError:
         at=at,
         found=name,
         expected="a measure of schemas/measures.toml",
-        remedy=did_you_mean(name, load_measures()) or "keelbook methods lists the measures",
+        remedy=did_you_mean(name, load_measures()) or "schemas/measures.toml lists the measures",
     )
 
 

@@ -20,6 +20,7 @@ from keelbook.stages.labour import LabourParams
 from keelbook.stages.services import ServicesParams
 from keelbook.stages.shares import SharesParams
 from keelbook.stages.stocks import StocksParams
+from keelbook.stages.totals import Grouping
 
 MEASURES_FILE = "keelbook/schemas/measures.toml"
 
@@ -38,12 +39,22 @@ def harmonise_params(assembly: Assembly, parameters: Parameters) -> HarmonisePar
         return frozenset(lists.position("obs_status", code) for code, what in basis.items() if what == kind)
 
     parents = {code: lists.parent("asset", code) for code in lists.codes("asset")}
+    partition = {code: lists.partition("worker_group", code) for code in lists.codes("worker_group")}
+    partition_of = {code: name for code, name in partition.items() if name is not None}
+    grouping = Grouping(
+        {code: parent for code, parent in parents.items() if parent is not None},
+        partition_of,
+        tuple(dict.fromkeys(partition_of.values())),
+    )
     return HarmoniseParams(
         measures=load_measures(),
         measures_file=MEASURES_FILE,
         measure_lines={name: lines["measure", name] for name in load_measures()},
         reference_year=assembly.reference_year,
-        asset_parents={code: parent for code, parent in parents.items() if parent is not None},
+        grouping=grouping,
+        fill_method=as_choice(parameters.get("harmonise", "fill_method")),
+        fill_measures=as_choice(parameters.get("harmonise", "fill_measures")),
+        fill_longest=as_choice(parameters.get("harmonise", "fill_longest")),
         imputed=resting_on("imputed"),
         assumed=resting_on("assumed"),
         sources={

@@ -158,14 +158,11 @@ class Build:
         positions = [column[number] for number in series_ids]
         return out[:, positions]
 
-    def edge(self, series_id: int, role: str) -> list[int]:
-        """Return the numbers of the series that one role of a series reads."""
-        return [
-            number
-            for (number,) in self.rows(
-                "select input_series_id from edge where series_id = ? and role = ?", (series_id, role)
-            )
-        ]
+    def edge(self, series_id: int, role: str) -> tuple[int, int | None] | None:
+        """Return the number of the series that one role of a series reads, and the year if it is a fixed one."""
+        sql = "select input_series_id, input_period from edge where series_id = ? and role = ? and period is null"
+        rows = self.rows(sql, (series_id, role))
+        return (rows[0][0], rows[0][1]) if rows else None
 
     def cells(self, series: Series) -> list[Cell]:
         """Return the observations behind a delivered series, in order of time.

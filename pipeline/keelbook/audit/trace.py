@@ -220,8 +220,9 @@ def _line_up(build: Build, series: Series, formula: Formula) -> list[_Line]:
         elif link.kind == "observation":
             lines.append(_observed(build, link, series))
         elif link.kind == "edge":
-            found = [_by_number(build, number) for number in build.edge(series.series_id, link.role)]
-            lines.append(_line(build, link, found or [None]))
+            found = build.edge(series.series_id, link.role)
+            number, year = found if found is not None else (-1, None)
+            lines.append(_line(build, link, [_by_number(build, number)], year))
         else:
             lines.append(_line(build, link, [_at(build, member, link) for member in members]))
     return lines
@@ -244,11 +245,13 @@ def _by_number(build: Build, number: int) -> Series | None:
     return found[0] if found else None
 
 
-def _line(build: Build, link: Link, columns: list[Series | None]) -> _Line:
+def _line(build: Build, link: Link, columns: list[Series | None], year: int | None = None) -> _Line:
     values = np.full((len(build.periods), len(columns)), np.nan)
     there = [i for i, s in enumerate(columns) if s is not None]
     values[:, there] = build.values([s.series_id for s in columns if s is not None])
-    fixed = build.facts["reference_year"] - build.periods.start if link.kind == "reference" else None
+    if link.kind == "reference":
+        year = build.facts["reference_year"]
+    fixed = None if year is None else year - build.periods.start
     if fixed is not None:
         values = np.broadcast_to(values[fixed], values.shape)
     elif link.shift:

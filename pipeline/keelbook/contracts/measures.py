@@ -12,7 +12,15 @@ from keelbook.locate import folder
 
 Unit = Literal["currency", "hours", "persons", "ratio", "rate", "index", "years", "log_change"]
 PriceBasis = Literal[
-    "current", "constant", "previous_year", "year_end", "historic", "index", "source_index", "_Z"
+    "current",
+    "constant",
+    "previous_year",
+    "year_end",
+    "historic",
+    "index",
+    "source_index",
+    "earlier_index",
+    "_Z",
 ]
 Applies = Literal["required", "total", "none"]
 """`required`: a code below the total; `total`: a code or `_T`; `none`: always `_Z`."""

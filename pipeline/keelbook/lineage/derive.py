@@ -20,6 +20,7 @@ from keelbook.blocks import (
     I8,
     NO_FIGURE,
     NORMAL,
+    OWN_PERIOD,
     PROVISIONAL,
     Block,
     BlockKey,
@@ -31,7 +32,7 @@ from keelbook.blocks import (
     SeriesIndex,
 )
 from keelbook.lineage.formula import Formula, Role, Setting, values_of
-from keelbook.lineage.primitives import Either, Groups, Rule
+from keelbook.lineage.primitives import Either, Groups, Rule, Span
 
 
 @dataclass(frozen=True)
@@ -84,6 +85,8 @@ def line_up(role: Role, source: Given, like: SeriesIndex, periods: range) -> _Li
         mine = np.flatnonzero((source.edges.which == i) & (source.edges.key >= 0))
         if len(mine):
             part = _columns(block, block.series.locate(source.edges.key[mine]))
+            if source.edges.period is not None:
+                part = _at_periods(part, source.edges.period[mine], periods)
             out = _overlay(out, part, mine)
     return _shifted(out, role.shift)
 
@@ -119,6 +122,20 @@ def _overlay(base: _Lined, part: _Lined, columns: I8) -> _Lined:
         return full
 
     return _Lined(*(over(getattr(base, f.name), getattr(part, f.name)) for f in fields(base)))
+
+
+def _at_periods(x: _Lined, period: I8, periods: range) -> _Lined:
+    """Return for each series the figure of its own fixed period in every period."""
+    own = period == OWN_PERIOD
+    row = np.where(own, 0, period - periods.start)
+
+    def read(a: Any) -> Any:
+        if a is None:
+            return None
+        fixed = np.broadcast_to(a[row, np.arange(a.shape[1])], a.shape)
+        return np.where(own, a, fixed)
+
+    return _Lined(*(read(getattr(x, f.name)) for f in fields(x)))
 
 
 def _repeated(x: _Lined, row: int) -> _Lined:
@@ -208,7 +225,7 @@ def derive(
         chosen=np.broadcast_to(np.asarray(chosen, bool), (n,)).copy(),
         part=np.broadcast_to(np.asarray(part, bool), (n,)).copy(),
         status=_status(formula, rule, x, lined, value, groups),
-        conf=_confidentiality(lined, value, groups, formula),
+        conf=_confidentiality(formula, rule, x, lined, value, groups),
         imputed=imputed,
         assumed=assumed,
     )
@@ -241,7 +258,7 @@ def _status(
     if formula.carries:
         return _carried(lined[0].status, value)
     out = np.full(value.shape, ESTIMATED if formula.estimated else NORMAL, np.int8)
-    if isinstance(rule, Either):
+    if isinstance(rule, Either) and rule.estimated:
         out[rule.branch(*x) > 0] = ESTIMATED
     for item in lined:
         if item.status is not None and len(item.status) == len(value):
@@ -268,11 +285,14 @@ def _carried(status: I1 | None, value: F8) -> I1 | None:
     return out
 
 
-def _confidentiality(lined: list[_Lined], value: F8, groups: Groups, formula: Formula) -> I1 | None:
+def _confidentiality(
+    formula: Formula, rule: Rule, x: list[F8], lined: list[_Lined], value: F8, groups: Groups
+) -> I1 | None:
     """Return the conf status that follows from the inputs: whatever rests on a hidden figure is hidden.
 
     A sum over time (a stock) stays hidden for all later periods: two consecutive stocks and a known rate would
-    give the hidden flow away. Sums over series are hidden too: no count and dominance rule is declared.
+    give the hidden flow away. A span may reach later periods (a trend window, an index before its reference
+    year), which count as well. Sums over series are hidden too: no count and dominance rule is declared.
     """
     hidden = [item.conf for item in lined if item.conf is not None and item.conf.any()]
     if not hidden:
@@ -283,6 +303,18 @@ def _confidentiality(lined: list[_Lined], value: F8, groups: Groups, formula: Fo
         if formula.kind == "group":
             whole = (np.nan_to_num(groups.reduce((whole > 0).astype(np.float64))) > 0).astype(np.int8)
         elif formula.kind == "series":
+            if isinstance(rule, Span):
+                whole = np.maximum(whole, _reached(conf, rule, x[0]))
             whole = np.maximum.accumulate(whole, axis=0)
         out = np.maximum(out, whole)
     return out
+
+
+def _reached(conf: I1, rule: Span, x: F8) -> I1:
+    """Return 1 for every output figure whose span of input periods holds a hidden one, shape of the output."""
+    spans = rule.plan(x)
+    until = np.vstack([np.zeros((1, conf.shape[1]), np.int64), np.cumsum(conf > 0, axis=0)])
+    first, n = np.maximum(spans.first, 0), np.arange(conf.shape[1])
+    step = 1 if spans.step is None else spans.step
+    last = np.minimum(first + (spans.length - 1) * step + 1, len(conf))
+    return ((spans.first >= 0) & (until[last, n] > until[first, n])).astype(np.int8)

@@ -130,18 +130,24 @@ class Lag:
         size, size0, g = np.abs(np.where(live, flow, 0.0)), np.abs(opening[o, n]), growth[o, n]
         positive = bool((flow[live] >= 0).all()) and bool((opening[o, n][live.any(axis=0)] >= 0).all())
         bottom = y if positive else self._apply(size, size0, g, o, live)
+        flat = live & (bottom == 0)
+        if flat.any():
+            bottom = np.where(
+                flat, self._apply(live.astype(np.float64), np.ones_like(size0), g, o, live), bottom
+            )
         out: list[F4 | None] = []
         for of_flow, of_opening, *_ in kinds:
             if of_flow is None and of_opening is None:
                 out.append(None)
                 continue
-            flow_part = np.zeros_like(size) if of_flow is None else np.asarray(size * of_flow, np.float64)
-            opening_part = (
-                np.zeros_like(size0)
-                if of_opening is None
-                else np.asarray(size0 * of_opening[o, n], np.float64)
-            )
-            out.append(_ratio(self._apply(flow_part, opening_part, g, o, live), bottom, y))
+            flow_part: F4 | F8 = np.zeros_like(size) if of_flow is None else of_flow
+            opening_part: F4 | F8 = np.zeros_like(size0) if of_opening is None else of_opening[o, n]
+            top = self._apply(_product(size, flow_part), _product(size0, opening_part), g, o, live)
+            if flat.any():
+                # Nothing is left of anything: inputs of equal size stand in.
+                equal = self._apply(_product(live, flow_part), _product(1, opening_part), g, o, live)
+                top = np.where(flat, equal, top)
+            out.append(_ratio(top, bottom, y))
         return out
 
     def terms(self, x: Sequence[F8], at: tuple[int, int]) -> Iterator[Term]:
@@ -173,3 +179,7 @@ def _starts(o: I8, periods: int) -> Iterator[tuple[int, B1, int]]:
     for start in np.unique(o):
         if periods - int(start) > 1:
             yield int(start), o == start, periods - int(start) - 1
+
+
+def _product(size: F8 | B1 | int, part: F4 | F8) -> F8:
+    return np.asarray(size * part, np.float64)

@@ -61,20 +61,30 @@ def _ratio(top: F8, bottom: F8, like: F8) -> F4:
 
 
 def _weighted_parts(sizes: Sequence[F8], parts: Parts, y: F8) -> F4 | None:
-    """Return sum(size x part) / sum(size); equal weights where all sizes are zero."""
+    """Return sum(size x part) / sum(size); equal weights where all sizes are zero.
+
+    An input whose part is NaN is a figure by definition: it rests on nothing, so that the others decide.
+    """
     if all(p is None for p in parts):
         return None
     bottom = np.zeros_like(y)
     top = np.zeros_like(y)
     plain = np.zeros_like(y)
+    count: F8 | int = len(sizes)
     for size, part in zip(sizes, parts, strict=True):
+        if part is None:
+            bottom += size
+            continue
+        by_definition = np.isnan(part)
+        if by_definition.any():
+            size, part = np.where(by_definition, 0, size), np.where(by_definition, np.float32(0), part)
+            count = count - by_definition
         bottom += size
-        if part is not None:
-            top += size * part
-            plain += part
+        top += size * part
+        plain += part
     flat = bottom == 0
     if flat.any():
-        top[flat], bottom[flat] = plain[flat], len(sizes)
+        top[flat], bottom[flat] = plain[flat], np.broadcast_to(count, y.shape)[flat]
     return _ratio(top, bottom, y)
 
 
@@ -128,10 +138,14 @@ class Each:
 
 @dataclass(frozen=True, eq=False)
 class Either:
-    """The first of several pointwise rules that gives a figure; each takes the arguments at `takes`."""
+    """The first of several pointwise rules that gives a figure; each takes the arguments at `takes`.
+
+    estimated: a figure of any rule but the first is an estimate (status E).
+    """
 
     rules: tuple[Each, ...]
     takes: tuple[tuple[int, ...], ...]
+    estimated: bool = True
 
     def branch(self, *x: F8) -> I8:
         """Return which rule gave each figure, shape of the output; -1 where none did."""
@@ -236,16 +250,18 @@ class Sum:
         value, weight = self._pieces(x)
         size = np.abs(weight) if self.by_weight else np.abs(weight * value)
         bottom = self.groups.reduce(size)
-        count = self.groups.reduce(np.ones_like(size))
+        flat = bottom == 0
+        if flat.any():
+            bottom = np.where(flat, self.groups.reduce(np.ones_like(size)), bottom)
         out: list[F4 | None] = []
         for parts in kinds:
             if parts[0] is None:
                 out.append(None)
                 continue
-            top, flat = self.groups.reduce(size * parts[0]), bottom == 0
+            top = self.groups.reduce(size * parts[0])
             if flat.any():
                 plain = self.groups.reduce(np.asarray(parts[0], np.float64))
-                top, bottom = np.where(flat, plain, top), np.where(flat, count, bottom)
+                top = np.where(flat, plain, top)
             out.append(_ratio(top, bottom, y))
         return out
 
@@ -284,7 +300,7 @@ class Span:
             if not inside.any():
                 break
             t, n = np.nonzero(inside)
-            piece = spans.coefficients[k, t, n] * z[spans.first[t, n] + k, n]
+            piece = spans.coefficients[k, t, n] * z[spans.rows(k, t, n), n]
             y[t, n] = piece if k == 0 else y[t, n] + piece
         empty = (spans.first >= 0) & (spans.length == 0)
         y[empty] = 0.0
@@ -323,7 +339,7 @@ class Span:
         with np.errstate(invalid="ignore", divide="ignore"):
             z = self.inner(x[0])
         for k in range(int(spans.length[t, n])):
-            row = int(spans.first[t, n]) + k
+            row = int(spans.rows(k, np.asarray(t), np.asarray(n)))
             w, v = float(spans.coefficients[k, t, n]), float(z[row, n])
             yield Term(0, row, n, v, w, w * v)
 
@@ -332,8 +348,14 @@ class Span:
 
 
 class Spans(NamedTuple):
-    """first (T, N) input row or -1; length (T, N); coefficients (K, T, N)."""
+    """first (T, N) input row or -1; length (T, N); coefficients (K, T, N); step (T, N) between rows, 1 if None."""
 
     first: I8
     length: I8
     coefficients: F8
+    step: I8 | None = None
+
+    def rows(self, k: int, t: I8, n: I8) -> I8:
+        """Return the k-th input row of the outputs at rows t and columns n."""
+        step = 1 if self.step is None else self.step[t, n]
+        return self.first[t, n] + k * step

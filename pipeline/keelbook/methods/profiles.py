@@ -49,9 +49,29 @@ def constant(ages: F8, *, life: float) -> F8:
     return hyperbolic(ages, life=life, b=1.0)
 
 
+def straight_line(ages: F8, *, life: float) -> F8:
+    """Return the price 1 - a / L for a < L, 0 from L on: equal consumption in every period of the life.
+
+    Source: OECD, Measuring Capital (2001, 2009), straight-line depreciation (form cited from memory).
+    """
+    return linear(ages, life=life)
+
+
+def declining_balance(ages: F8, *, life: float, factor: float) -> F8:
+    """Return the price (1 - R / L)^a for a < L, 0 from L on, R > 0 the declining-balance `factor`.
+
+    An asset whose life is R or less loses all in its first period. Rates published as R / L for a whole cohort
+    are never cut at a life: they are the form `cohort_geometric` of the weights.
+    Source: OECD, Measuring Capital (2001, 2009), declining-balance depreciation (form cited from memory).
+    """
+    life = require("the life", life, low=0, open_low=True)
+    factor = require("the declining-balance factor", factor, low=0, open_low=True)
+    return np.where(ages < life, geometric(ages, rate=min(1.0, factor / life)), 0.0)
+
+
 @dataclass(frozen=True)
 class Form:
-    """An efficiency form and the names of the parameters it takes."""
+    """A form of efficiency or of price and the names of the parameters it takes."""
 
     function: Callable[..., F8]
     parameters: tuple[str, ...]
@@ -66,6 +86,14 @@ EFFICIENCY_FORMS: Mapping[str, Form] = MappingProxyType(
     }
 )
 """Every efficiency form of a single asset, by name."""
+
+AGE_PRICE_FORMS: Mapping[str, Form] = MappingProxyType(
+    {
+        "straight_line": Form(straight_line, ("life",)),
+        "declining_balance": Form(declining_balance, ("life", "factor")),
+    }
+)
+"""Every form in which the price of a single asset by age is given directly, by name."""
 
 
 def efficiency_form(form: str) -> Form:
@@ -103,15 +131,37 @@ def efficiency(
         ValueError: unknown form; a parameter that the form needs is missing or out of range; a parameter that
             the form does not use is given; a negative age.
     """
-    chosen = efficiency_form(form)
-    given = {"life": life, "rate": rate, "b": b}
-    unused = [name for name, value in given.items() if value is not None and name not in chosen.parameters]
+    return _profile(f"{form} efficiency", efficiency_form(form), ages, {"life": life, "rate": rate, "b": b})
+
+
+def direct_age_price(form: str, ages: F8, *, life: float, factor: float | None = None) -> F8:
+    """Return the price z(a) of one asset relative to a new one, given directly by a form.
+
+    Args:
+        form: a name of `AGE_PRICE_FORMS`.
+        ages: exact ages in periods, any shape, all >= 0; half ages are allowed. NaN is refused.
+        life: life L in periods.
+        factor: declining-balance factor R, for that form.
+
+    Returns:
+        Array of the shape of `ages`, no unit, between 0 and 1.
+
+    Raises:
+        ValueError: unknown form (the message lists those that exist); otherwise as `efficiency`.
+    """
+    if form not in AGE_PRICE_FORMS:
+        raise ValueError(f"unknown age-price form {form!r}, expected one of {', '.join(AGE_PRICE_FORMS)}")
+    return _profile(f"{form} price", AGE_PRICE_FORMS[form], ages, {"life": life, "factor": factor})
+
+
+def _profile(name: str, form: Form, ages: F8, given: Mapping[str, float | None]) -> F8:
+    unused = [key for key, value in given.items() if value is not None and key not in form.parameters]
     if unused:
-        raise ValueError(f"the {form} efficiency does not use {' and '.join(unused)}: leave it out")
+        raise ValueError(f"the {name} does not use {' and '.join(unused)}: leave it out")
     ages = np.asarray(ages, dtype=np.float64)
     if not np.all(ages >= 0):
         raise ValueError("an age is negative or not a number")
-    return chosen.function(ages, **{name: given[name] for name in chosen.parameters})
+    return form.function(ages, **{key: given[key] for key in form.parameters})
 
 
 def age_price(h: F8, discount_rate: float) -> F8:

@@ -8,6 +8,7 @@ from keelbook.lineage.formula import Formula
 from keelbook.stages import (
     decomposition,
     deflation,
+    filling,
     harmonise,
     income,
     labour,
@@ -33,6 +34,7 @@ FORMULAS: Mapping[str, Formula] = MappingProxyType(
         formula.name: formula
         for formula in (
             *harmonise.FORMULAS,
+            *filling.FORMULAS,
             *totals.FORMULAS,
             *(formula for stage in STAGES for formula in stage.formulas),
         )

@@ -32,7 +32,7 @@ YEAR_END_PRICE = Formula(
 
 FORMULAS = (DEFLATED, YEAR_END_PRICE)
 
-INVESTMENT = BlockKey("investment", "delivered", "current")
+INVESTMENT = BlockKey("investment", CHOSEN, "current")
 PRICE = BlockKey("investment_price", "rebased", "index")
 YEAR_END = BlockKey("investment_price", "year_end", "year_end")
 
@@ -87,6 +87,7 @@ def run(inputs: Inputs, params: DeflationParams) -> Result:
     current = inputs.get(INVESTMENT)
     if current is None:
         return Result((year_end,), [missing_input("deflation", INVESTMENT)])
+    current = current.take(current.part)
     edges = price_edges(current.series, prices, params.order.value)
     without_price = edges.key < 0
     findings = [_no_price(current, int(n)) for n in np.flatnonzero(without_price)]
@@ -144,9 +145,7 @@ def _missing_years(current: Block, volume: Block) -> list[dict[str, Any]]:
 STAGE = Stage(
     name="deflation",
     needs=frozenset(),
-    optional=keys(
-        "investment/delivered/current", "investment/delivered/constant", "investment_price/*/index"
-    ),
+    optional=keys("investment/*/current", "investment/delivered/constant", "investment_price/*/index"),
     gives=keys("investment/deflated/constant", "investment_price/year_end/year_end"),
     scope="area",
     run=run,

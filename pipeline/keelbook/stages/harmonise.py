@@ -1,7 +1,7 @@
 """Harmonise: from observations in delivered units and frequencies to annual figures in the measure's unit."""
 
 from collections.abc import Iterator, Mapping, Sequence
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from typing import Any
 
 import numpy as np
@@ -28,10 +28,14 @@ from keelbook.contracts.measures import Measure
 from keelbook.lineage.derive import Given, derive, given, in_year
 from keelbook.lineage.formula import Formula, Role, Setting
 from keelbook.lineage.primitives import Each, Span, Spans
-from keelbook.stages.base import Result, note
-from keelbook.stages.totals import totals, with_parts
+from keelbook.stages.base import CHOSEN, Book, Result, note
+from keelbook.stages.filling import fill, link
+from keelbook.stages.totals import Grouping, totals, with_parts
 
 QUARTERS = 4
+
+ADDITIVE = ("currency", "hours", "persons")
+STOCKS = ("gross_stock", "productive_stock", "net_stock")
 
 
 def _scaled(x: F8, delivered: F8, wanted: F8) -> F8:
@@ -91,7 +95,10 @@ class HarmoniseParams:
     measures_file: str
     measure_lines: Mapping[str, int]
     reference_year: int
-    asset_parents: Mapping[str, str]
+    grouping: Grouping
+    fill_method: Choice
+    fill_measures: Choice
+    fill_longest: Choice
     imputed: frozenset[int]
     assumed: frozenset[int]
     sources: Mapping[str, "SourcePlace"] = field(default_factory=dict)
@@ -206,32 +213,84 @@ def _leaf(status: I1, positions: frozenset[int]) -> F4 | None:
 
 def harmonise(observed: Sequence[ObservedBlock], years: range, params: HarmoniseParams) -> Result:
     """Return the delivered figures, annual and in the units of their measures, and totals from parts."""
-    blocks: list[Block] = []
     findings: list[dict[str, Any]] = []
     by_key: dict[BlockKey, list[Block]] = {}
     for item in observed:
         block = _annual(item, years, params)
         by_key.setdefault(block.key, []).append(block)
         findings.extend(_incomplete_years(item, block))
-    for key, parts in by_key.items():
-        block = with_parts(merge(parts), _summed(params.measures[key.measure]), params.asset_parents)
-        blocks.append(block)
+    delivered = {key: _with_parts(merge(parts), params) for key, parts in by_key.items()}
+    blocks: list[Block] = []
+    for key, block in delivered.items():
+        forms, problems = _forms(_set_aside(block, delivered), delivered, params)
+        blocks.extend(forms)
+        findings.extend(problems)
+        chosen = Book(forms).get(BlockKey(key.measure, CHOSEN, key.price_basis))
+        if chosen is None:
+            continue
         if key.price_basis == "source_index":
-            rebased, problems = _rebase(block, params)
+            rebased, problems = _rebase(chosen, params)
             blocks.append(rebased)
             findings.extend(problems)
-        elif params.measures[key.measure].unit in ("currency", "hours", "persons"):
-            blocks.extend(totals(block, _summed(params.measures[key.measure]), "sum_of_parts"))
+        elif params.measures[key.measure].unit in ADDITIVE and key.measure not in STOCKS:
+            whole = chosen if len(forms) > 1 else forms[0]
+            blocks.extend(totals(whole, summed(params.measures[key.measure]), "sum_of_parts"))
     return Result(blocks, findings)
 
 
-def _summed(measure: Measure) -> list[str]:
+def _forms(
+    block: Block, delivered: Mapping[BlockKey, Block], params: HarmoniseParams
+) -> tuple[list[Block], list[dict[str, Any]]]:
+    """Return a delivered block, its linked and its filled form; of each series, the last one is chosen."""
+    forms, findings = [block], []
+    earlier = delivered.get(BlockKey(block.key.measure, "delivered", "earlier_index"))
+    if earlier is not None and block.key.price_basis == "source_index":
+        linked, problems = link(block, earlier)
+        findings.extend(problems)
+        if linked is not None:
+            forms = [_not_chosen(block, linked), linked]
+    if params.fill_method.value != "none" and block.key.measure in params.fill_measures.value:
+        for at, form in enumerate(list(forms)):
+            filled, problems = fill(form.take(form.chosen), params.fill_method, params.fill_longest)
+            findings.extend(problems)
+            if filled is not None:
+                forms[at] = _not_chosen(form, filled)
+                forms.append(filled)
+    return forms, findings
+
+
+def _not_chosen(block: Block, instead: Block) -> Block:
+    """Return the block without its choice of the series that another form stands in for."""
+    return replace(block, chosen=block.chosen & (instead.series.locate(block.series.key) < 0))
+
+
+def _set_aside(block: Block, delivered: Mapping[BlockKey, Block]) -> Block:
+    """Return a delivered stock with only those series chosen that no investment is delivered for.
+
+    The others are benchmarks, or stand beside the stock that is computed.
+    """
+    if block.key.measure not in STOCKS:
+        return block
+    chosen = block.chosen.copy()
+    for basis in ("current", "constant"):
+        investment = delivered.get(BlockKey("investment", "delivered", basis))
+        if investment is not None:
+            chosen &= investment.series.locate(block.series.key) < 0
+    return replace(block, chosen=chosen)
+
+
+def _with_parts(block: Block, params: HarmoniseParams) -> Block:
+    return with_parts(block, summed(params.measures[block.key.measure]), params.grouping)
+
+
+def summed(measure: Measure) -> list[str]:
+    """Return the dimensions over which totals of a measure are made."""
     dims = {
         "industry": measure.dims.industry,
         "asset": measure.dims.asset,
         "worker_group": measure.dims.worker_group,
     }
-    return [dim for dim, applies in dims.items() if applies != "none"]
+    return ["sector", *(dim for dim, applies in dims.items() if applies != "none")]
 
 
 def _annual(item: ObservedBlock, years: range, params: HarmoniseParams) -> Block:
@@ -259,7 +318,7 @@ def _annual(item: ObservedBlock, years: range, params: HarmoniseParams) -> Block
         years,
         {"observation": Given((item.block,), observation=True)},
         sets=(choices,),
-        chosen=key.price_basis != "source_index",
+        chosen=key.price_basis != "earlier_index",
     )
 
 
@@ -300,7 +359,7 @@ def _rebase(block: Block, params: HarmoniseParams) -> tuple[Block, list[dict[str
         {"index": given(block), "index_in_reference_year": in_year(block, params.reference_year)},
         part=block.part,
     )
-    lost = np.flatnonzero(np.isnan(block.value[row]) & np.isfinite(block.value).any(axis=0))
+    lost = np.flatnonzero(np.isnan(block.value[row]) & block.held)
     findings = [
         note(
             "no_reference_year",

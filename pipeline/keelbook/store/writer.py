@@ -8,7 +8,19 @@ import duckdb
 import numpy as np
 import pandas as pd
 
-from keelbook.blocks import DIMS, F8, I1, Block, BlockKey, Choice, Derivation, MethodSet, status_of
+from keelbook.blocks import (
+    DIMS,
+    F8,
+    I1,
+    I8,
+    OWN_PERIOD,
+    Block,
+    BlockKey,
+    Choice,
+    Derivation,
+    MethodSet,
+    status_of,
+)
 from keelbook.contracts.codes import CodeLists
 from keelbook.contracts.measures import Measure
 from keelbook.contracts.tables import Table
@@ -194,17 +206,32 @@ def _edges(block: Block, first: int, numbered: Mapping[BlockKey, tuple[Block, in
                 mine = (edges.which == i) & (edges.key >= 0) & (number >= 0) & (target < 0)
                 target[mine] = at + number[mine]
         linked = np.flatnonzero(target >= 0)
-        out.append(
-            pd.DataFrame(
-                {
-                    "series_id": (first + linked).astype(np.int32),
-                    "period": pd.array([pd.NA] * len(linked), dtype="Int16"),
-                    "role": constant(role, len(linked)),
-                    "input_series_id": target[linked].astype(np.int32),
-                }
-            )
-        )
+        period = np.full(len(linked), OWN_PERIOD) if edges.period is None else edges.period[linked]
+        out.append(_edge_rows(first + linked, None, role, target[linked], period))
+    fills = block.origin.fills
+    if fills is not None and len(fills.column):
+        source, at = numbered[fills.block]
+        number = at + source.series.locate(block.series.key[fills.column])
+        for role, input_period in (("before", fills.before), ("after", fills.after)):
+            out.append(_edge_rows(first + fills.column, fills.period, role, number, input_period))
     return out
+
+
+def _edge_rows(series: I8, period: I8 | None, role: str, target: I8, input_period: I8) -> pd.DataFrame:
+    none = np.zeros(len(series), np.int16)
+    return pd.DataFrame(
+        {
+            "series_id": series.astype(np.int32),
+            "period": pd.arrays.IntegerArray(
+                none if period is None else period.astype(np.int16), np.full(len(series), period is None)
+            ),
+            "role": constant(role, len(series)),
+            "input_series_id": target.astype(np.int32),
+            "input_period": pd.arrays.IntegerArray(
+                input_period.astype(np.int16), np.asarray(input_period == OWN_PERIOD)
+            ),
+        }
+    )
 
 
 def _resolved(key: BlockKey, wanted: Any, numbered: Mapping[BlockKey, tuple[Block, int]]) -> Iterable[Any]:

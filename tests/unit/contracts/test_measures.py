@@ -81,7 +81,7 @@ def test_price_bases_fit_the_unit(name: str) -> None:
     if measure.unit in ("hours", "persons", "rate", "log_change"):
         assert bases == {"_Z"}
     if measure.unit == "index":
-        assert bases <= {"index", "source_index"}
+        assert bases <= {"index", "source_index", "year_end"}
 
 
 def test_defaults_of_a_dimension_not_given() -> None:

@@ -55,11 +55,7 @@ def test_the_shipped_rules() -> None:
 def test_every_positive_measure_is_held_to_its_sign() -> None:
     rules = load_screening_rules()
     positive = {name for name, measure in load_measures().items() if measure.positive}
-    index = {
-        name
-        for name, measure in load_measures().items()
-        if set(measure.price_bases) <= {"index", "source_index"}
-    }
+    index = {name for name, measure in load_measures().items() if measure.unit == "index"}
     signs = [rule for rule in rules if isinstance(rule, Sign)]
     held = set().union(*((set(rule.measures) or positive) - set(rule.excluding) for rule in signs))
     assert positive <= held | index

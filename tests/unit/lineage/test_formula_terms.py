@@ -1,0 +1,338 @@
+"""Every registered formula is held to its own terms: what explains a figure must also give it."""
+
+from collections.abc import Callable
+from typing import Any, NamedTuple
+
+import numpy as np
+import pytest
+
+from keelbook.lineage.formula import Formula, Setting
+from keelbook.lineage.lag import Lag
+from keelbook.lineage.primitives import Each, Either, Groups, Rule, Span
+from keelbook.stages.catalogue import FORMULAS
+
+T, N = 14, 8
+YEARS = range(2000, 2000 + T)
+REFERENCE_YEAR = 2008
+TOLERANCE = 1e-12
+
+Arrays = list[np.ndarray]
+
+
+class Case(NamedTuple):
+    """How a formula is put to the test.
+
+    inputs: makes one array a role. sets: parameter sets, spread over the series. linear: the contributions
+    of the terms add up to the figure.
+    """
+
+    inputs: Callable[[np.random.Generator, int], Arrays]
+    sets: tuple[dict[str, Any], ...] = ({},)
+    linear: bool = False
+    members: int | None = None
+
+
+def _positive(rng: np.random.Generator, roles: int) -> Arrays:
+    out = [rng.uniform(0.5, 1.5, (T, N)) for _ in range(roles)]
+    out[0][:2, 1] = np.nan
+    return out
+
+
+def _shares(rng: np.random.Generator, roles: int) -> Arrays:
+    return [rng.uniform(0.1, 0.9, (T, N)) for _ in range(roles)]
+
+
+def _signed(rng: np.random.Generator, roles: int) -> Arrays:
+    """Growth rates first, shares last."""
+    return [*(rng.normal(0, 0.05, (T, N)) for _ in range(roles - 1)), *_shares(rng, 1)]
+
+
+def _share_and_growth(rng: np.random.Generator, roles: int) -> Arrays:
+    return _signed(rng, roles)[::-1]
+
+
+def _quarters(rng: np.random.Generator, roles: int) -> Arrays:
+    x = rng.uniform(50, 150, (4 * T, N))
+    x[5, 2] = np.nan
+    return [x]
+
+
+def _prices(rng: np.random.Generator, roles: int) -> Arrays:
+    price = rng.uniform(0.5, 1.5, (T, N))
+    price[:3, 1] = np.nan
+    price[-2:, 2] = np.nan
+    later, before = np.full((T, N), np.nan), np.full((T, N), np.nan)
+    later[:-1], before[1:] = price[1:], price[:-1]
+    return [price, later, before]
+
+
+def _investment(rng: np.random.Generator, roles: int) -> Arrays:
+    x = rng.uniform(50, 150, (T, N))
+    for n in range(N):
+        x[: 1 + n % 4, n] = np.nan
+    x[3, 5] = -1.0
+    return [x]
+
+
+def _start(rng: np.random.Generator, roles: int) -> Arrays:
+    """Fitted investment and growth, one figure a series."""
+    investment, growth = np.full((T, N), np.nan), np.full((T, N), np.nan)
+    at = np.arange(N) % 4, np.arange(N)
+    investment[at], growth[at] = rng.uniform(50, 150, N), rng.uniform(-0.02, 0.06, N)
+    return [investment, growth]
+
+
+def _vintages(rng: np.random.Generator, roles: int) -> Arrays:
+    """Investment from different years on, one series with a gap, and an opening in the year before."""
+    flow = rng.uniform(-20, 150, (T, N))
+    opening, growth = _start(rng, 2)
+    for n in range(N):
+        flow[: 1 + n % 4, n] = np.nan
+    flow[9, 3] = np.nan
+    return [flow, 10 * opening, growth]
+
+
+def _growth(rng: np.random.Generator, roles: int) -> Arrays:
+    x = rng.normal(0.02, 0.05, (T, N))
+    for n in range(N):
+        x[: 1 + n % 3, n] = np.nan
+    x[-1, 4] = np.nan
+    return [x]
+
+
+MEMBERS = 11
+
+
+def _parts(rng: np.random.Generator, roles: int) -> Arrays:
+    return [rng.uniform(-50, 150, (T, MEMBERS)) for _ in range(roles)]
+
+
+def _stocks_and_costs(rng: np.random.Generator, roles: int) -> Arrays:
+    out = [rng.uniform(0.5, 1.5, (T, MEMBERS)) for _ in range(roles)]
+    # An asset that is not held: no stock, no cost, and so no say in the index.
+    out[0][4:, 0] = out[1][4:, 0] = 0.0
+    out[2][4:, 0] = out[3][4:, 0] = 0.0
+    return out
+
+
+def _asset(efficiency: str, timing: str, **parameters: Any) -> dict[str, Any]:
+    return {
+        "asset.efficiency": efficiency,
+        "capital.timing": timing,
+        **{f"asset.{name}": value for name, value in parameters.items()},
+    }
+
+
+ASSETS = (
+    _asset("cohort_geometric", "mid", rate=0.1, gross_life=6, retirement="simultaneous"),
+    _asset("cohort_geometric", "start", rate=0.3, gross_life=25, retirement="simultaneous"),
+    _asset("cohort_geometric", "end", rate=0.02, gross_life=9.5, retirement="simultaneous"),
+    _asset("hyperbolic", "mid", life=5, b=0.5, discount_rate=0.04, retirement="simultaneous"),
+    _asset("hyperbolic", "end", life=30, b=0.75, discount_rate=0.0, retirement="simultaneous"),
+    _asset("linear", "start", life=8.25, discount_rate=0.03, retirement="simultaneous"),
+)
+
+UNITS = ({"source.unit_mult": 3, "measure.unit_mult": 6}, {"source.unit_mult": 0, "measure.unit_mult": 0})
+
+
+def _annual(rule: str) -> tuple[dict[str, Any], ...]:
+    return tuple({**units, "measure.annual": rule} for units in UNITS)
+
+
+PLAIN = Case(_positive)
+LINEAR = Case(_positive, linear=True)
+OF_SHARES = Case(_shares)
+VINTAGES = Case(_vintages, ASSETS, linear=True)
+OPENING = Case(_start, ASSETS)
+
+CASES: dict[str, tuple[Case, ...]] = {
+    "scaled": (Case(_positive, UNITS, linear=True),),
+    "annual": tuple(Case(_quarters, _annual(rule), linear=True) for rule in ("sum", "mean", "end")),
+    "rebased": (PLAIN,),
+    "sum_of_parts": (Case(_parts, linear=True, members=MEMBERS),),
+    "deflated": (PLAIN,),
+    "year_end_price": (Case(_prices),),
+    "log_trend_growth": tuple(Case(_investment, ({"capital.trend_window": n},)) for n in (2, 10)),
+    "log_trend_start": tuple(Case(_investment, ({"capital.trend_window": n},)) for n in (2, 10)),
+    "gross_stock_steady_state": (OPENING,),
+    "productive_stock_steady_state": (OPENING,),
+    "net_stock_steady_state": (OPENING,),
+    "gross_stock_of_vintages": (VINTAGES,),
+    "productive_stock_of_vintages": (VINTAGES,),
+    "net_stock_of_vintages": (VINTAGES,),
+    "consumption_of_fixed_capital_of_vintages": (VINTAGES,),
+    "retirements_of_vintages": (VINTAGES,),
+    "at_current_prices": (PLAIN,),
+    "at_replacement_cost": (PLAIN,),
+    "hours_index": (PLAIN,),
+    "value_added_at_factor_cost": (LINEAR,),
+    "labour_income_unadjusted": (LINEAR,),
+    "labour_income_by_hours": (
+        Case(_positive, ({"income.relative_earnings": 1.0}, {"income.relative_earnings": 0.7})),
+    ),
+    "labour_income_fixed_fraction": (
+        Case(
+            _positive,
+            ({"income.mixed_income_labour_fraction": 0.5}, {"income.mixed_income_labour_fraction": 1.0}),
+            linear=True,
+        ),
+    ),
+    "capital_income_as_rest": (LINEAR,),
+    "labour_share": (PLAIN,),
+    "capital_share": (OF_SHARES,),
+    "asset_base": (PLAIN,),
+    "revaluation": (PLAIN,),
+    "endogenous_rate_of_return": (PLAIN,),
+    "capital_compensation": (PLAIN,),
+    "average_productive_stock": (LINEAR,),
+    "unit_user_cost": (PLAIN,),
+    "capital_services_growth": (Case(_stocks_and_costs, linear=True, members=MEMBERS),),
+    "capital_services_chained": (Case(_growth, ({"assembly.reference_year": REFERENCE_YEAR},)),),
+    "capital_composition": (PLAIN,),
+    "two_period_mean": (Case(_shares, linear=True),),
+    "moving_mean": tuple(Case(_growth, ({"shares.smoothing_years": n},), linear=True) for n in (1, 5)),
+    "growth_log": (PLAIN,),
+    "growth_discrete": (PLAIN,),
+    "growth_per_hour_log": (PLAIN,),
+    "growth_per_hour_discrete": (PLAIN,),
+    "capital_contribution": (Case(_share_and_growth),),
+    "capital_contribution_discrete": (Case(_share_and_growth),),
+    "labour_contribution": (Case(_share_and_growth),),
+    "labour_contribution_discrete": (Case(_share_and_growth),),
+    "residual": (Case(_signed),),
+    "residual_discrete": (Case(_signed),),
+    "residual_labour_augmenting": (Case(_signed),),
+    "residual_capital_augmenting": (Case(_signed),),
+    "residual_level_log": (Case(_growth),),
+    "residual_level_discrete": (Case(_growth),),
+}
+
+BY_CASE = [(name, i) for name, cases in CASES.items() for i in range(len(cases))]
+
+
+def _made(name: str, i: int) -> tuple[Formula, Rule, Arrays, np.ndarray, Case]:
+    formula, case = FORMULAS[name], CASES[name][i]
+    rng = np.random.default_rng(sum(name.encode()) + i)
+    x = case.inputs(rng, len(formula.roles))
+    assert len(x) == len(formula.roles)
+    members = np.arange(N, dtype=np.int32)
+    if case.members is not None:
+        # Unordered groups, one of them empty, and members that belong to none.
+        members = rng.permutation(np.r_[np.arange(N - 1), -1, 0, 1, 1]).astype(np.int32)
+        assert len(members) == case.members
+    which = (np.arange(N) % len(case.sets)).astype(np.int32)
+    rule = formula.build(Setting(case.sets, which, YEARS, Groups(members, N)))
+    return formula, rule, x, rule.compute(*x), case
+
+
+def _cells(y: np.ndarray, count: int = 40) -> list[tuple[int, int]]:
+    there = np.argwhere(np.isfinite(y))
+    assert len(there), "the inputs of this case give no figure at all"
+    picked = np.random.default_rng(1).permutation(len(there))[:count]
+    return [(int(t), int(n)) for t, n in there[picked]]
+
+
+def test_every_registered_formula_has_a_case():
+    assert set(CASES) == set(FORMULAS)
+
+
+@pytest.mark.parametrize(("name", "i"), BY_CASE)
+def test_terms_give_the_figure(name, i):
+    formula, rule, x, y, case = _made(name, i)
+    assert y.shape == (T, N)
+    assert y.dtype == np.float64
+    for at in _cells(y):
+        terms = list(rule.terms(x, at))
+        size = sum(abs(t.contribution) for t in terms) + abs(y[at])
+        assert abs(rule.combine(x, terms) - y[at]) <= TOLERANCE * size
+        assert len({(t.role, t.row, t.column) for t in terms}) == len(terms)
+        for t in terms:
+            assert 0 <= t.role < len(formula.roles)
+            assert t.contribution == pytest.approx(t.value * t.weight, rel=1e-14, abs=1e-300)
+        if case.linear:
+            assert abs(sum(t.contribution for t in terms) - y[at]) <= TOLERANCE * size
+
+
+@pytest.mark.parametrize(("name", "i"), BY_CASE)
+def test_terms_of_one_series_alone_give_the_same_figure(name, i):
+    """A trace re-performs one figure from the inputs of its series only: the others must not matter."""
+    formula, _, x, y, case = _made(name, i)
+    if case.members is not None:
+        return_columns = {n: np.flatnonzero(_groups_of(name, i).of == n) for n in range(N)}
+    else:
+        return_columns = {n: np.array([n]) for n in range(N)}
+    for t, n in _cells(y, 10):
+        columns = return_columns[n]
+        one_set = case.sets[n % len(case.sets)]
+        groups = Groups(np.zeros(len(columns), np.int32), 1)
+        alone = formula.build(Setting([one_set], np.zeros(1, np.int32), YEARS, groups))
+        mine = [v[:, columns] for v in x]
+        again = alone.compute(*mine)[t, 0]
+        size = sum(abs(term.contribution) for term in alone.terms(mine, (t, 0))) + abs(again)
+        assert abs(again - y[t, n]) <= TOLERANCE * size
+
+
+def _groups_of(name: str, i: int) -> Groups:
+    rule: Any = _made(name, i)[1]
+    groups: Groups = rule.groups
+    return groups
+
+
+@pytest.mark.parametrize(("name", "i"), BY_CASE)
+def test_weights_are_slopes(name, i):
+    """Against central differences of the whole block: each weight is what its cell does to the figure."""
+    _, rule, x, y, _ = _made(name, i)
+    plain_span = isinstance(rule, Span) and rule.inner(np.full((1, 1), 3.0))[0, 0] == 3.0
+    inner = None if plain_span or not isinstance(rule, Span) else rule.inner
+    outer = rule.outer if isinstance(rule, Span) else None
+    for at in _cells(y, 6):
+        for term in rule.terms(x, at):
+            if not isinstance(rule, Each | Either | Lag | Span) and term.role > 0:
+                continue
+            expected = term.weight
+            here = x[term.role][term.row, term.column]
+            if isinstance(rule, Span):
+                assert outer is not None
+                total = np.float64(sum(t.contribution for t in rule.terms(x, at)))
+                expected *= _slope(outer, total) * (1.0 if inner is None else _slope(inner, here))
+            elif not isinstance(rule, Each | Either | Lag):
+                # Weights of an index are made of its other inputs: the value alone is stepped.
+                expected *= _value_slope(rule, x, term.row, term.column)
+            step = 1e-5 * max(abs(here), 1e-2)
+            ends = []
+            for sign in (1, -1):
+                moved = [v.copy() for v in x]
+                moved[term.role][term.row, term.column] += sign * step
+                ends.append(rule.compute(*moved)[at])
+            slope = (ends[0] - ends[1]) / (2 * step)
+            assert slope == pytest.approx(expected, rel=1e-5, abs=1e-7 * (1 + abs(y[at])))
+
+
+def _slope(f: Callable[[Any], Any], at: Any) -> float:
+    return float(np.imag(f(np.complex128(at) + 1e-30j)) / 1e-30)
+
+
+def _value_slope(rule: Any, x: Arrays, row: int, column: int) -> float:
+    point = [np.asarray(v[row, column]) for v in x]
+    with np.errstate(all="ignore"):
+        slope = float(np.imag(rule.value(point[0] + 1e-30j, *point[1:])) / 1e-30)
+    return slope
+
+
+@pytest.mark.parametrize(("name", "i"), BY_CASE)
+def test_no_figure_without_terms_and_no_cell_left_out(name, i):
+    """What changes a figure is among its terms, for every rule whose inputs are all terms."""
+    formula, rule, x, y, case = _made(name, i)
+    counted = {r for r, role in enumerate(formula.roles) if role.counted}
+    by_value = {0} if case.members is not None else counted
+    for at in _cells(y, 4):
+        named = {(t.role, t.row, t.column) for t in rule.terms(x, at)}
+        for role in by_value:
+            columns = range(x[role].shape[1]) if case.members is not None else [at[1]]
+            for row in range(x[role].shape[0]):
+                for column in columns:
+                    moved = [v.copy() for v in x]
+                    moved[role][row, column] *= 1.01
+                    changed = rule.compute(*moved)[at]
+                    if abs(changed - y[at]) > 1e-9 * abs(y[at]):
+                        assert (role, row, column) in named
