@@ -26,6 +26,9 @@ COLUMNS: dict[str, str] = {
     "found": "str",
     "expected": "str",
     "remedy": "str",
+    "accepted_by": "str",
+    "accepted_on": "str",
+    "accepted_reason": "str",
 }
 """Column -> dtype of a findings frame. Text columns use "" for "does not apply", never null."""
 
@@ -45,10 +48,11 @@ def frame(records: Iterable[Mapping[str, Any]] | pd.DataFrame = ()) -> pd.DataFr
 
 
 def concat(frames: Iterable[pd.DataFrame]) -> pd.DataFrame:
-    """Stack findings frames, stop first, then warn, then note; the order within a severity is kept."""
+    """Stack findings frames: stop, warn, note, then the accepted ones; the order within these is kept."""
     parts = [part for part in frames if len(part)]
     if not parts:
         return frame()
     stacked = pd.concat(parts, ignore_index=True)
     order = stacked["severity"].map({name: rank for rank, name in enumerate(SEVERITIES)})
+    order += len(SEVERITIES) * (stacked["accepted_by"] != "")
     return stacked.iloc[order.argsort(kind="stable")].reset_index(drop=True)

@@ -68,14 +68,21 @@ FAULTS = {
     "missing file": Fault(
         lambda folder: (folder / PERSONS).unlink(),
         3,
-        ("assembly.toml, line ", "the file of source 'persons' is not there", PERSONS, "wait for the delivery"),
+        (
+            "assembly.toml, line ",
+            "the file of source 'persons' is not there",
+            PERSONS,
+            "wait for the delivery",
+        ),
     ),
-    "empty csv": Fault(write(INCOME, b""), 5, (INCOME, "empty", "assembly.toml, line 115")),
+    "empty csv": Fault(write(INCOME, b""), 5, (INCOME, "the file is empty", "assembly.toml, line ")),
     "header without a record": Fault(
         write(HOURS, b"period,branch,status,thousand hours\n"), 5, (HOURS, "no record follows the header")
     ),
-    "empty workbook": Fault(write(BOOK, b""), 5, (BOOK, "empty", "assembly.toml, line 9")),
-    "binary garbage for a workbook": Fault(write(BOOK, random.Random(1).randbytes(4096)), 5, (BOOK, "workbook")),
+    "empty workbook": Fault(write(BOOK, b""), 5, (BOOK, "the file is empty", "assembly.toml, line ")),
+    "binary garbage for a workbook": Fault(
+        write(BOOK, random.Random(1).randbytes(4096)), 5, (BOOK, "workbook")
+    ),
     "text that is not utf-8": Fault(
         replace(HOURS, b"1985-Q3,A", b"1985-Q3,\xff"), 5, (HOURS, "line 4", "utf-8")
     ),
@@ -96,7 +103,9 @@ FAULTS = {
         replace(PERSONS, b";203.6;", b";about 200;"), 5, (f"{PERSONS}, line 3, column 3", "'about 200'")
     ),
     "a text that looks like a number where none is declared": Fault(
-        cell("T4 Volume", "C8", "8112.3"), 5, (f"{BOOK}, sheet 'T4 Volume', cell C8", "8112.3", "text_numbers")
+        cell("T4 Volume", "C8", "8112.3"),
+        5,
+        (f"{BOOK}, sheet 'T4 Volume', cell C8", "8112.3", "text_numbers"),
     ),
     "decimal comma where a point is declared": Fault(
         replace(PERSONS, b";203.6;", b";203,6;"), 5, (f"{PERSONS}, line 3, column 3", "203,6")
@@ -112,12 +121,12 @@ FAULTS = {
     "a header one row lower in a sheet": Fault(
         workbook(lambda book: book["T4 Volume"].insert_rows(1)),
         5,
-        (f"{BOOK}, sheet 'T4 Volume'", "row 6", "expected"),
+        (f"{BOOK}, sheet 'T4 Volume', row 5", "found in row 6", "assembly.toml, line "),
     ),
     "a header one line lower in a csv": Fault(
         lambda folder: (folder / INCOME).write_bytes(b"Statistik\r\n" + (folder / INCOME).read_bytes()),
         5,
-        (INCOME, "line 2", "header_line"),
+        (f"{INCOME}, line 1", "'Jahr'", "found in row 2", "assembly.toml, line "),
     ),
     "a renamed column in a csv": Fault(
         replace(HOURS, b"thousand hours", b"thousands of hours"),
@@ -135,7 +144,12 @@ FAULTS = {
     "incomes that do not add up": Fault(
         replace(INCOME, b";B.1g;6.200,0;", b";B.1g;6.900,0;"),
         5,
-        (f"{INCOME}, line 2, column 4", "value_added is not the sum of its terms", "found: 6900", "difference 700"),
+        (
+            f"{INCOME}, line 2, column 4",
+            "value_added is not the sum of its terms",
+            "found: 6900",
+            "difference 700",
+        ),
     ),
 }
 
@@ -154,14 +168,18 @@ def test_is_refused_with_place_and_remedy(name: str, published: Path, refused: C
     assert refusal.shown == ""
 
 
-def test_a_refused_run_keeps_what_it_found_for_its_owner(published: Path, refused: Callable[..., Any]) -> None:
+def test_a_refused_run_keeps_what_it_found_for_its_owner(
+    published: Path, refused: Callable[..., Any]
+) -> None:
     cell("T2 Prices", "F12", 0)(published)
     assert refused("assemble", published, "--quiet").code == 5
     folder = published / "build" / "refused"
     assert sorted(path.name for path in folder.iterdir()) == ["evidence.duckdb", "log.jsonl"]
     assert all(path.stat().st_mode & 0o777 == 0o600 for path in folder.iterdir())
     with open_read(folder / "evidence.duckdb") as con:
-        rows = con.execute('select rule, sheet, "row", "column" from finding where severity = \'stop\'').fetchall()
+        rows = con.execute(
+            'select rule, sheet, "row", "column" from finding where severity = \'stop\''
+        ).fetchall()
     assert rows == [("nonpositive_index", "T2 Prices", 12, 6)]
 
 
@@ -242,14 +260,15 @@ def test_the_faulty_demo_is_stopped_and_every_planted_fault_is_named(
     with path.open(encoding="utf-8", newline="") as lines:
         planted = list(csv.DictReader(lines))
     assert len(planted) == 9
-    missed = [
-        wanted
-        for wanted in planted
-        if not any(
-            all(wanted[name] in ("", str(finding[name])) for name in ("rule", "file", "sheet", "row", "column"))
-            for finding in findings
-        )
-    ]
+
+    def names_it(finding: dict[str, Any], wanted: dict[str, str]) -> bool:
+        """A label that is no code is named at the first figure under it: same row, with the label as found."""
+        of_label = wanted["rule"] == "unknown_code"
+        place = ("rule", "file", "sheet", "row", *(() if of_label else ("column",)))
+        said = wanted["found"] in finding["found"] if of_label else True
+        return said and all(wanted[name] in ("", str(finding[name])) for name in place)
+
+    missed = [wanted for wanted in planted if not any(names_it(finding, wanted) for finding in findings)]
     assert missed == []
 
 

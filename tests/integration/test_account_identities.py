@@ -85,9 +85,7 @@ ADDITIVE = [
 
 @pytest.mark.parametrize(("measure", "basis"), ADDITIVE)
 @pytest.mark.parametrize("dims", [("asset",), ("industry",), ("industry", "asset")])
-def test_a_total_is_the_sum_of_its_parts(
-    take: Take, measure: str, basis: str, dims: tuple[str, ...]
-) -> None:
+def test_a_total_is_the_sum_of_its_parts(take: Take, measure: str, basis: str, dims: tuple[str, ...]) -> None:
     figures = take(measure, basis)
     made = total(figures, *dims)
     agree(figures, made, total(figures.abs(), *dims), 34 * {1: 6, 2: 1}[len(dims)])
@@ -127,7 +125,9 @@ def test_the_costs_of_all_assets_are_the_capital_income(take: Take) -> None:
 
 def test_the_user_cost_times_the_stock_is_the_cost(take: Take) -> None:
     cost = take("capital_compensation", "current")
-    agree(take("user_cost", "current") * take("productive_stock_average", "constant"), cost, cost.abs(), 48 * 34)
+    agree(
+        take("user_cost", "current") * take("productive_stock_average", "constant"), cost, cost.abs(), 48 * 34
+    )
 
 
 @pytest.mark.parametrize("method", ["unadjusted", "hours", "fixed_fraction", "sum_of_industries"])
@@ -136,7 +136,9 @@ def test_the_two_shares_and_the_two_incomes_are_the_whole(take: Take, method: st
     one = pd.Series(1.0, labour.index)
     agree(labour + capital, one, one, 35)
     base = take("value_added", "current", "factor_cost")
-    agree(take("labour_income", "current", method) + take("capital_income", "current", method), base, base, 35)
+    agree(
+        take("labour_income", "current", method) + take("capital_income", "current", method), base, base, 35
+    )
 
 
 def test_labour_shares_come_in_the_order_that_mixed_income_allows(take: Take) -> None:
@@ -149,7 +151,8 @@ def test_labour_shares_come_in_the_order_that_mixed_income_allows(take: Take) ->
 @pytest.mark.parametrize("form", ["log", "discrete"])
 def test_contributions_and_residual_add_up_to_output_growth(take: Take, form: str) -> None:
     capital, labour, residual = (
-        take(f"{name}", "_Z", form) for name in ("capital_contribution", "labour_contribution", "residual_growth")
+        take(f"{name}", "_Z", form)
+        for name in ("capital_contribution", "labour_contribution", "residual_growth")
     )
     agree(
         take("output_growth", "_Z", form),

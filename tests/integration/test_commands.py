@@ -83,7 +83,9 @@ def test_a_figure_of_the_cp1252_file_is_traced_to_its_line(demo_build: Path) -> 
     lines = path.read_text(encoding="cp1252").splitlines()
     line = next(n for n, text in enumerate(lines, 1) if text.startswith("2015;Verarb") and ";B.1g;" in text)
     raw = lines[line - 1].split(";")[3]
-    found = reply("trace", demo_build, "value_added", "--industry", "C", "--price-basis", "current", "--year", 2015)
+    found = reply(
+        "trace", demo_build, "value_added", "--industry", "C", "--price-basis", "current", "--year", 2015
+    )
     assert found["stored"] == float(raw.replace(".", "").replace(",", "."))
     (cell,) = cells(found)
     assert (cell["file"], cell["sheet"]) == ("sources/income_account.csv", "")
@@ -97,7 +99,9 @@ def test_a_year_of_hours_is_traced_to_its_four_quarters(demo_build: Path) -> Non
     at = [next(n for n, text in enumerate(lines, 1) if text.startswith(start)) for start in wanted]
     raw = [lines[n - 1].rsplit(",", 1)[1] for n in at]
     assert all(text.endswith("p") for text in raw)
-    found = reply("trace", demo_build, "hours_worked", "--industry", "M", "--worker-group", "SELF", "--year", 2019)
+    found = reply(
+        "trace", demo_build, "hours_worked", "--industry", "M", "--worker-group", "SELF", "--year", 2019
+    )
     # Thousand hours in four quarters are million hours of a year.
     assert found["stored"] == pytest.approx(sum(int(text[:-1]) for text in raw) / 1000, rel=1e-12)
     assert [term["time_period"] for term in found["terms"]] == [f"2019-Q{q}" for q in range(1, 5)]
@@ -141,7 +145,16 @@ def test_trace_names_the_nearest_measure(demo_build: Path) -> None:
 def test_decompose_prints_what_is_stored(demo_build: Path) -> None:
     text = ask("decompose", demo_build)
     assert text.splitlines()[0].startswith("Vorrelund (an invented country)")
-    for word in ("output", "capital", "labour", "residual", "labour-aug.", "capital-aug.", "level", "deepening"):
+    for word in (
+        "output",
+        "capital",
+        "labour",
+        "residual",
+        "labour-aug.",
+        "capital-aug.",
+        "level",
+        "deepening",
+    ):
         assert word in text
     rows = reply("decompose", demo_build)
     assert [row["industry"] for row in rows["averages"]] == ["_T", *"ACDFGHJM"]
@@ -153,7 +166,9 @@ def test_decompose_prints_what_is_stored(demo_build: Path) -> None:
 
 
 def test_decompose_over_chosen_years_and_in_the_other_form(demo_build: Path) -> None:
-    rows = reply("decompose", demo_build, "--industry", "J", "--form", "discrete", "--from", 2001, "--to", 2010)
+    rows = reply(
+        "decompose", demo_build, "--industry", "J", "--form", "discrete", "--from", 2001, "--to", 2010
+    )
     assert {(row["first"], row["last"]) for row in rows["averages"]} == {(2001, 2010)}
     mine = [row for row in rows["yearly"]["rows"] if 2001 <= int(row["time_period"]) <= 2010]
     of_j = next(row for row in rows["averages"] if row["industry"] == "J")

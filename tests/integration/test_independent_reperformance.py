@@ -183,7 +183,9 @@ def capital(account: Account, book: Any, rules: Path, industry: str, asset: str)
     assumed = [first / (1 + g) ** j for j in range(BACKCAST, 0, -1)]
     vintages = [*assumed, *(volume[y] for y in YEARS)]
     productive, net, gross = weights(asset_rule(rules / "assets.csv", asset, industry), len(vintages))
-    stocks = {"productive_stock": productive, "net_stock": net} | ({} if gross is None else {"gross_stock": gross})
+    stocks = {"productive_stock": productive, "net_stock": net} | (
+        {} if gross is None else {"gross_stock": gross}
+    )
     year_end = {}
     for y in YEARS:
         before, after = index.get(y - 1), index.get(y + 1)
@@ -196,7 +198,9 @@ def capital(account: Account, book: Any, rules: Path, industry: str, asset: str)
         found = stock(vintages, left)
         account.put(measure, "steady_state", "constant", asset, {YEARS[0] - 1: found.pop(YEARS[0] - 1)})
         account.put(measure, "perpetual_inventory", "constant", asset, found)
-        account.put(measure, "perpetual_inventory", "year_end", asset, {y: year_end[y] * found[y] for y in YEARS})
+        account.put(
+            measure, "perpetual_inventory", "year_end", asset, {y: year_end[y] * found[y] for y in YEARS}
+        )
     losses = {"consumption_of_fixed_capital": net} | ({} if gross is None else {"retirements": gross})
     for measure, left in losses.items():
         lost = account.put(measure, "perpetual_inventory", "constant", asset, loss(vintages, left))
@@ -208,7 +212,11 @@ def capital(account: Account, book: Any, rules: Path, industry: str, asset: str)
     gain = {y: (year_end[y] / year_end[y - 1] - 1) * base[y] for y in YEARS[1:]}
     account.put("revaluation", "actual", "current", asset, gain)
     account.put(
-        "productive_stock_average", "average", "constant", asset, {y: (k[y - 1] + k[y]) / 2 for y in YEARS[1:]}
+        "productive_stock_average",
+        "average",
+        "constant",
+        asset,
+        {y: (k[y - 1] + k[y]) / 2 for y in YEARS[1:]},
     )
 
 
@@ -222,7 +230,9 @@ def industry_account(sources: Path, rules: Path, industry: str) -> Account:
     worked, worked_self = (
         hours(sources / "hours_quarterly.csv", industry, status) for status in ("employees", "self-employed")
     )
-    base = account.put("value_added", "factor_cost", "current", "_Z", {y: output[y] - taxes[y] for y in YEARS})
+    base = account.put(
+        "value_added", "factor_cost", "current", "_Z", {y: output[y] - taxes[y] for y in YEARS}
+    )
     labour = {y: pay[y] + pay[y] / worked[y] * worked_self[y] for y in YEARS}
     share = account.put("labour_share", "hours", "_Z", "_Z", {y: labour[y] / base[y] for y in YEARS})
     surplus = account.put("capital_income", "hours", "current", "_Z", {y: base[y] - labour[y] for y in YEARS})
@@ -297,14 +307,28 @@ def test_the_panel_holds_what_the_files_give(
         for year, value in expected.items():
             # Growth and residuals are differences of near numbers: they are held to the size of the series.
             within = 1e-9 * max(abs(value), size if measure.endswith("growth") else 0.0)
-            assert abs(stored[year] - value) <= within, (measure, method, basis, asset, year, stored[year], value)
+            assert abs(stored[year] - value) <= within, (
+                measure,
+                method,
+                basis,
+                asset,
+                year,
+                stored[year],
+                value,
+            )
         compared += len(expected)
     assert compared > 3000
 
 
 def test_the_hyperbolic_weights_by_hand() -> None:
     """Life 2, b = 0.5, no discounting: h = 1, 2/3 at whole ages, so z = 1, 0.4, 0."""
-    rule: dict[str, float | None] = {"rate": None, "life": 2.0, "gross_life": None, "b": 0.5, "discount_rate": 0.0}
+    rule: dict[str, float | None] = {
+        "rate": None,
+        "life": 2.0,
+        "gross_life": None,
+        "b": 0.5,
+        "discount_rate": 0.0,
+    }
     productive, net, gross = weights(rule, 3)
     assert productive == pytest.approx([1.5 / 1.75, 0.5 / 1.25, 0])
     assert net == pytest.approx([0.7, 0.2, 0])

@@ -1,10 +1,16 @@
 """Blocks small enough to be worked out by hand: short code lists, series written as texts."""
 
+from dataclasses import replace
+from functools import cache
+from types import SimpleNamespace
 from typing import Any
 
 import numpy as np
 
+from keelbook.assembly import plan
 from keelbook.blocks import NO_FIGURE, Block, BlockKey, Choice, CodeTable, Origin, SeriesIndex
+from keelbook.contracts.codes import load_code_lists
+from keelbook.contracts.parameters import load_parameters
 from keelbook.stages.base import Book, Inputs, Stage
 
 TABLE = CodeTable(
@@ -12,12 +18,12 @@ TABLE = CodeTable(
         "area": ("XA", "XB"),
         "sector": ("S1", "S11", "S13"),
         "industry": ("_T", "_Z", "A", "C"),
-        "asset": ("_T", "_Z", "N11", "N112", "N113", "N1131"),
+        "asset": ("_T", "_Z", "N11", "N11K", "N112", "N11M", "N113", "N1131"),
         "worker_group": ("_T", "_Z", "SAL", "SELF"),
     }
 )
 
-PARENTS = {"N112": "N11", "N113": "N11", "N1131": "N113"}
+REFERENCE_YEAR = 2011
 
 
 def codes(series: str) -> dict[str, str]:
@@ -87,6 +93,34 @@ def holds(block: Block, series: str) -> bool:
 
 def choice(name: str, value: Any) -> Choice:
     return Choice(name, value, "rules/test.toml", 1, "made up for a test")
+
+
+@cache
+def _assembly() -> Any:
+    """Return as much of an assembly as the plan reads: no rules of its own, and two sources."""
+    yearly = SimpleNamespace(name="yearly", annual_rate=False)
+    rates = SimpleNamespace(name="rates", annual_rate=True)
+    return SimpleNamespace(
+        folder=None,
+        lists=load_code_lists(),
+        reference_year=REFERENCE_YEAR,
+        lines={("reference_year",): 4},
+        sources=(yearly, rates),
+        line_of={"yearly": 10, "rates": 20}.get,
+        rule_overrides=(),
+    )
+
+
+def params(stage: str, **changes: Any) -> Any:
+    """Return the parameters of a stage by the shipped rules, with some values changed."""
+    if stage == "harmonise":
+        shipped: Any = plan.harmonise_params(_assembly(), load_parameters())
+    else:
+        shipped = plan.stage_params(_assembly(), load_parameters())[stage]
+    for name, value in changes.items():
+        old = getattr(shipped, name)
+        shipped = replace(shipped, **{name: replace(old, value=value) if isinstance(old, Choice) else value})
+    return shipped
 
 
 def run_stage(stage: Stage[Any], params: Any, *blocks: Block) -> tuple[Book, list[dict[str, Any]]]:

@@ -22,14 +22,14 @@ from keelbook.contracts.codes import load_code_lists
 
 def test_keys_are_mixed_radix_with_area_first():
     assert TABLE.strides == {
-        "area": 3 * 4 * 6 * 4,
-        "sector": 4 * 6 * 4,
-        "industry": 6 * 4,
+        "area": 3 * 4 * 8 * 4,
+        "sector": 4 * 8 * 4,
+        "industry": 8 * 4,
         "asset": 4,
         "worker_group": 1,
     }
     text = "area=XB sector=S11 industry=C asset=N113 worker_group=SAL"
-    assert number(text) == 1 * 288 + 1 * 96 + 3 * 24 + 4 * 4 + 2
+    assert number(text) == 1 * 384 + 1 * 128 + 3 * 32 + 6 * 4 + 2
     assert TABLE.labels(number(text)) == codes(text)
 
 

@@ -1,7 +1,7 @@
 """`assembly.toml`: what an assembly declares, and all that can be wrong with it before a file is opened."""
 
 import codecs
-from collections.abc import Callable, Mapping
+from collections.abc import Callable, Iterable, Mapping
 from dataclasses import dataclass, field
 from pathlib import Path, PurePosixPath
 from typing import Annotated, Any, Literal
@@ -11,6 +11,14 @@ from pydantic_core import PydanticCustomError
 
 from keelbook.contracts.assets import load_asset_rules
 from keelbook.contracts.codes import DIMS, CodeLists, load_code_lists
+from keelbook.contracts.judgements import (
+    Acceptance,
+    Correction,
+    Entry,
+    SourceSheet,
+    load_acceptances,
+    load_corrections,
+)
 from keelbook.contracts.loader import Declared, Place, fault, faults, parse_toml, validate
 from keelbook.contracts.measures import Measure, PriceBasis, load_measures
 from keelbook.contracts.parameters import (
@@ -541,8 +549,9 @@ class _File(Declared):
 class Assembly:
     """A declared production.
 
-    `period` is its first and last year; `rule_overrides` the parameters set under `[rules]`; `lists` the code
-    lists with its areas and its own codes.
+    `period` is its first and last year; `rule_overrides` the parameters set under `[rules]`; `corrections` and
+    `acceptances` what its people decided about single figures; `lists` the code lists with its areas and its own
+    codes.
     """
 
     folder: Path
@@ -554,6 +563,8 @@ class Assembly:
     note: str
     sources: tuple[Source, ...]
     rule_overrides: tuple[Parameter, ...]
+    corrections: tuple[Entry[Correction], ...]
+    acceptances: tuple[Entry[Acceptance], ...]
     lists: CodeLists = field(repr=False)
     lines: Mapping[Place, int] = field(repr=False)
 
@@ -564,9 +575,13 @@ class Assembly:
                 return self.lines["source", at]
         raise KeyError(source)
 
+    def sheets(self) -> dict[str, SourceSheet]:
+        """Return source name -> its file and sheet."""
+        return _sheets(self.sources)
+
 
 def load_assembly(folder: Path) -> Assembly:
-    """Read and check everything an assembly declares: `assembly.toml` and its own `rules/`.
+    """Read and check everything an assembly declares: `assembly.toml`, its corrections, acceptances and rules.
 
     Whether the source files exist is not looked at.
 
@@ -599,8 +614,14 @@ def load_assembly(folder: Path) -> Assembly:
     declared = collected(lambda: validate(data, lines, path, _File, {"lists": lists, "folder": folder}), None)
     collected(lambda: rule_files(folder), None)
     collected(lambda: load_asset_rules(folder, lists), None)
-    collected(lambda: load_screening_rules(folder), None)
+    screening = {rule.id: rule for rule in collected(lambda: load_screening_rules(folder), ())}
     problems += _stray_rules(folder)
+    # Both name sources, and cannot be judged while these are not known.
+    sheets = _sheets(declared.source) if declared else {}
+    corrections = collected(lambda: load_corrections(folder, lists, sheets), ()) if declared else ()
+    acceptances = (
+        collected(lambda: load_acceptances(folder, lists, sheets, screening), ()) if declared else ()
+    )
     if problems:
         raise DeclarationError(list(dict.fromkeys(problems)))
     overrides = tuple(
@@ -618,9 +639,15 @@ def load_assembly(folder: Path) -> Assembly:
         declared.note,
         declared.source,
         overrides,
+        corrections,
+        acceptances,
         lists,
         lines,
     )
+
+
+def _sheets(sources: Iterable[Source]) -> dict[str, SourceSheet]:
+    return {one.name: SourceSheet(one.file, one.excel.sheet if one.excel else "") for one in sources}
 
 
 def _stray_rules(folder: Path) -> list[Problem]:

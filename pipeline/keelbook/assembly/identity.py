@@ -5,6 +5,7 @@ from dataclasses import dataclass
 from pathlib import Path
 
 from keelbook.assembly.declaration import Assembly
+from keelbook.contracts.judgements import ACCEPTANCES, CORRECTIONS
 from keelbook.locate import folder
 
 
@@ -23,6 +24,7 @@ def identify(assembly: Assembly, paths: dict[str, Path]) -> Identity:
     sources = _hash([(name, paths[name]) for name in sorted(paths)])
     declared = [
         ("assembly.toml", assembly.folder / "assembly.toml"),
+        *((name, path) for name in (CORRECTIONS, ACCEPTANCES) if (path := assembly.folder / name).is_file()),
         *_files(assembly.folder / "rules", "own"),
     ]
     rules = _hash([*declared, *_files(folder("rules"), "rules"), *_files(folder("schemas"), "schemas")])

@@ -19,6 +19,7 @@ from keelbook.stages.income import IncomeParams
 from keelbook.stages.labour import LabourParams
 from keelbook.stages.services import ServicesParams
 from keelbook.stages.shares import SharesParams
+from keelbook.stages.starting_stock import StartParams
 from keelbook.stages.stocks import StocksParams
 from keelbook.stages.totals import Grouping
 
@@ -39,8 +40,7 @@ def harmonise_params(assembly: Assembly, parameters: Parameters) -> HarmonisePar
         return frozenset(lists.position("obs_status", code) for code, what in basis.items() if what == kind)
 
     parents = {code: lists.parent("asset", code) for code in lists.codes("asset")}
-    partition = {code: lists.partition("worker_group", code) for code in lists.codes("worker_group")}
-    partition_of = {code: name for code, name in partition.items() if name is not None}
+    partition_of = partitions(assembly)
     grouping = Grouping(
         {code: parent for code, parent in parents.items() if parent is not None},
         partition_of,
@@ -64,6 +64,13 @@ def harmonise_params(assembly: Assembly, parameters: Parameters) -> HarmonisePar
     )
 
 
+def partitions(assembly: Assembly) -> dict[str, str]:
+    """Return the partition of all workers that each worker group belongs to."""
+    lists = assembly.lists
+    found = {code: lists.partition("worker_group", code) for code in lists.codes("worker_group")}
+    return {code: name for code, name in found.items() if name is not None}
+
+
 def stage_params(assembly: Assembly, parameters: Parameters) -> Mapping[str, Any]:
     """Return the parameters of every stage by its name."""
 
@@ -84,11 +91,14 @@ def stage_params(assembly: Assembly, parameters: Parameters) -> Mapping[str, Any
             asset_sets(load_asset_rules(assembly.folder, assembly.lists)),
             choice("capital", "timing"),
             choice("capital", "age_price_mode"),
-            choice("capital", "initial_stock"),
-            choice("capital", "trend_window"),
+            StartParams(choice("capital", "initial_stock"), choice("capital", "trend_window")),
             order,
         ),
-        "labour": LabourParams(assembly.reference_year),
+        "labour": LabourParams(
+            reference_year,
+            partitions(assembly),
+            choice("labour", "partition"),
+        ),
         "income": IncomeParams(
             choice("income", "net_taxes"),
             choice("income", "cascade"),
@@ -98,6 +108,8 @@ def stage_params(assembly: Assembly, parameters: Parameters) -> Mapping[str, Any
         "services": ServicesParams(
             choice("services", "rate_of_return"),
             choice("services", "rate_scope"),
+            choice("services", "exogenous_sectors"),
+            choice("services", "real_rate"),
             choice("services", "holding_gains"),
             choice("services", "productive_stock_timing"),
             order,

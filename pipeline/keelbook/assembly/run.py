@@ -5,7 +5,7 @@ import os
 import socket
 import time
 from collections.abc import Callable, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from pathlib import Path
 from typing import Any
 
@@ -18,6 +18,7 @@ from keelbook.assembly import plan
 from keelbook.assembly.declaration import Assembly, load_assembly
 from keelbook.assembly.identity import Identity, identify
 from keelbook.blocks import SeriesIndex
+from keelbook.contracts.codes import CodeLists
 from keelbook.contracts.measures import load_measures
 from keelbook.contracts.parameters import load_parameters
 from keelbook.contracts.screening_rules import load_screening_rules
@@ -25,11 +26,13 @@ from keelbook.contracts.tables import Table, load_tables
 from keelbook.errors import Problem, StopFindings
 from keelbook.frames import coded, constant
 from keelbook.stages import panel
+from keelbook.stages.acceptances import accept
 from keelbook.stages.base import Book, Inputs
 from keelbook.stages.catalogue import STAGES
 from keelbook.stages.harmonise import ObservedBlock, harmonise, observed_blocks
 from keelbook.stages.intake import Intake, source_paths, take_in
-from keelbook.stages.screening import ScreeningContext, screen
+from keelbook.stages.screening import screen
+from keelbook.stages.screening_report import ScreeningContext
 from keelbook.store import generations
 from keelbook.store.connect import open_new
 from keelbook.store.writer import Writer
@@ -40,6 +43,7 @@ EVIDENCE_TABLES = (
     "observation_series",
     "observation",
     "rejected_cell",
+    "correction",
     "finding",
 )
 
@@ -90,7 +94,7 @@ def assemble(
     """Build an assembly and publish the result, or say that nothing changed.
 
     Raises:
-        DeclarationError, SourceMissing, LockHeld: nothing was read or written.
+        DeclarationError, SourceMissing, LockHeld: nothing was published.
         StopFindings: a `stop` finding stands (or a `warn` under `strict`); the published build is untouched and
             what was found lies in the folder `refused`.
     """
@@ -109,16 +113,19 @@ def assemble(
             evidence.execute(tables[name].create_sql())
         try:
             taken = take_in(evidence, assembly, assembly.lists, load_measures(), progress=log.step)
+            _insert(evidence, tables["correction"], taken.corrections)
             found = [taken.findings, _screened(evidence, assembly, taken)]
             log.step("screened", findings=len(found[0]) + len(found[1]))
-            _stop_if_refused(found, strict, evidence, tables, work, target, log)
+            # What the acceptances of later findings are about is not known yet.
+            judged, _ = _accepted(assembly, findings.concat(found))
+            _stop_if_refused(judged, strict, evidence, tables, work, target, log)
             panel_file = open_new(work / generations.PANEL)
             writer = Writer(
                 panel_file, evidence, tables, assembly.lists, load_measures(), _currencies(assembly)
             )
             rows = _build(assembly, taken, writer, evidence, tables, found, log)
-            everything = findings.concat(found)
-            _stop_if_refused([everything], strict, evidence, tables, work, target, log)
+            everything = findings.concat(_accepted(assembly, findings.concat(found)))
+            _stop_if_refused(everything, strict, evidence, tables, work, target, log)
             stage_rows = pd.DataFrame(rows, columns=list(tables["stage_run"].column)).astype(
                 {"stage": "str", "note": "str"}
             )
@@ -138,7 +145,10 @@ def assemble(
 def screen_only(
     folder: Path, *, narrate: Callable[[str], None] = lambda _: None
 ) -> tuple[Assembly, Intake, pd.DataFrame]:
-    """Read and screen the sources of an assembly without writing anything."""
+    """Read and screen the sources of an assembly without writing anything.
+
+    Of the acceptances, those of screening rules are judged: what the stages will find is not known.
+    """
     assembly = load_assembly(folder)
     paths = source_paths(assembly)
     with duckdb.connect() as con:
@@ -148,6 +158,9 @@ def screen_only(
         con.execute("set enable_progress_bar = false")
         taken = take_in(con, assembly, assembly.lists, load_measures(), progress=narrate)
         found = findings.concat([taken.findings, _screened(con, assembly, taken)])
+        rules = {rule.id for rule in load_screening_rules(folder)}
+        entries = tuple(entry for entry in assembly.acceptances if entry.said.rule in rules)
+        found = findings.concat(_accepted(replace(assembly, acceptances=entries), found))
     del paths
     return assembly, taken, found
 
@@ -161,6 +174,12 @@ def _unchanged(assembly: Assembly, identity: Identity, now: Path, log: Log, stri
     found = findings.frame(found)
     raise_if_refused(found, strict, now)
     return Report(assembly, identity, now, True, found, pd.DataFrame(), stages, log.seconds)
+
+
+def _accepted(assembly: Assembly, found: pd.DataFrame) -> tuple[pd.DataFrame, pd.DataFrame]:
+    """Return the findings with the accepted ones marked, and the acceptances that no longer hold."""
+    acceptable = [rule.id for rule in load_screening_rules(assembly.folder) if rule.acceptable]
+    return accept(found, assembly.acceptances, assembly.sheets(), acceptable)
 
 
 def _screened(con: duckdb.DuckDBPyConnection, assembly: Assembly, taken: Intake) -> pd.DataFrame:
@@ -178,6 +197,7 @@ def _screened(con: duckdb.DuckDBPyConnection, assembly: Assembly, taken: Intake)
             labels.setdefault(dim, {}).update(codes)
     context = ScreeningContext(
         period=assembly.period,
+        reference_year=assembly.reference_year,
         lists=assembly.lists,
         measures=load_measures(),
         files=dict(zip(taken.sources["file_id"].tolist(), taken.sources["file"].tolist(), strict=True)),
@@ -282,16 +302,22 @@ def _write_observations(
             }
         )
         for name, frame in (("observation_series", pd.DataFrame(series)), ("observation", rows)):
-            tables[name].validate(frame, assembly.lists)
-            evidence.register("_frame", frame)
-            evidence.execute(f'insert into "{name}" by name select * from _frame')
-            evidence.unregister("_frame")
+            _insert(evidence, tables[name], frame, assembly.lists)
         first += n
+
+
+def _insert(
+    con: duckdb.DuckDBPyConnection, table: Table, frame: pd.DataFrame, lists: CodeLists | None = None
+) -> None:
+    table.validate(frame, lists)
+    con.register("_frame", frame)
+    con.execute(f'insert into "{table.table}" by name select * from _frame')
+    con.unregister("_frame")
 
 
 def _refused(found: pd.DataFrame, strict: bool) -> pd.DataFrame:
     blocking = ("stop", "warn") if strict else ("stop",)
-    return found[found["severity"].isin(blocking)]
+    return found[found["severity"].isin(blocking) & (found["accepted_by"] == "")]
 
 
 def raise_if_refused(found: pd.DataFrame, strict: bool, where: Path) -> None:
@@ -301,7 +327,7 @@ def raise_if_refused(found: pd.DataFrame, strict: bool, where: Path) -> None:
 
 
 def _stop_if_refused(
-    found: Sequence[pd.DataFrame],
+    found: pd.DataFrame,
     strict: bool,
     evidence: duckdb.DuckDBPyConnection,
     tables: Any,
@@ -309,19 +335,14 @@ def _stop_if_refused(
     out: Path,
     log: Log,
 ) -> None:
-    everything = findings.concat(found)
-    if not len(_refused(everything, strict)):
+    if not len(_refused(found, strict)):
         return
-    numbered = _numbered(everything)
-    tables["finding"].validate(numbered)
-    evidence.register("_frame", numbered)
-    evidence.execute('insert into "finding" by name select * from _frame')
-    evidence.unregister("_frame")
+    _insert(evidence, tables["finding"], _numbered(found))
     evidence.close()
-    log.say("refused", findings=len(everything))
+    log.say("refused", findings=len(found))
     (work / generations.LOG).write_text("\n".join(log.lines) + "\n", encoding="utf-8")
     generations.refuse(work, out)
-    raise_if_refused(everything, strict, out)
+    raise_if_refused(found, strict, out)
 
 
 def _numbered(found: pd.DataFrame) -> pd.DataFrame:
@@ -348,8 +369,10 @@ def as_problem(row: dict[Any, Any]) -> Problem:
         for name in ("measure", "area", "sector", "industry", "asset", "worker_group", "time_period")
         if row[name] not in ("", "_T", "_Z")
     )
+    accepted = f", accepted by {row['accepted_by']} on {row['accepted_on']}" if row["accepted_by"] else ""
+    reason = f"; accepted because {row['accepted_reason']}" if accepted else ""
     return Problem(
-        f"[{row['severity']} {row['rule']}] {row['message']}" + (f" ({key})" if key else ""),
+        f"[{row['severity']} {row['rule']}{accepted}] {row['message']}{f' ({key})' if key else ''}{reason}",
         row["file"],
         ", ".join(place),
         found=row["found"],

@@ -86,6 +86,20 @@ class Cell:
     row: int
     column: int
     raw: str
+    correction: "Corrected | None" = None
+
+
+@dataclass(frozen=True)
+class Corrected:
+    """One row of the table `correction`; `old` is None where the cell gave no figure."""
+
+    old: float | None
+    new: float
+    reason: str
+    author: str
+    date: str
+    file: str
+    line: int
 
 
 class Build:
@@ -186,18 +200,17 @@ class Build:
             f"""
             with wanted as (select * from observation_series s where {condition})
             select o.period, w.frequency, o.value, o.obs_status, w.source, f.file, f.sha256,
-                   c.sheet, c."row", c."column", c.raw
+                   c.sheet, c."row", c."column", c.raw,
+                   k.new is not null, k.old, k.new, k.reason, k.author, k.date, k.file, k.line
             from wanted w join observation o using (observation_series_id)
             join source_cell c using (cell_id) join source_file f using (file_id)
+            left join correction k using (cell_id)
             order by o.period
             """,
             [series.key[name] for name in names],
         ).fetchall()
         statuses = self._codes("obs_status")
-        return [
-            Cell(p, freq, np.nan if v is None else v, statuses[status], *rest)
-            for p, freq, v, status, *rest in rows
-        ]
+        return [_cell(row, statuses) for row in rows]
 
     @lru_cache(maxsize=8)  # noqa: B019 - a build is open for one command
     def _codes(self, name: str) -> list[str]:
@@ -232,6 +245,24 @@ class Build:
             return {}
         rows = self._evidence.execute("select series_id, period, value from withheld_figure").fetchall()
         return {(number, period): value for number, period, value in rows}
+
+
+def _cell(row: tuple[Any, ...], statuses: Sequence[str]) -> Cell:
+    period, frequency, value, status, source, file, sha256, sheet, at, column, raw, corrected, *change = row
+    return Cell(
+        period,
+        frequency,
+        np.nan if value is None else value,
+        statuses[status],
+        source,
+        file,
+        sha256,
+        sheet,
+        at,
+        column,
+        raw,
+        Corrected(*change) if corrected else None,
+    )
 
 
 def _pairs(text: str) -> dict[str, str]:

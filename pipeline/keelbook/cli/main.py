@@ -5,6 +5,7 @@ import click
 from keelbook.cli.assemble import assemble, screen
 from keelbook.cli.audit import trace, verify
 from keelbook.cli.catalogue import methods
+from keelbook.cli.report import report
 from keelbook.cli.results import decompose
 from keelbook.cli.start import new
 
@@ -19,5 +20,5 @@ def main() -> None:
     """
 
 
-for command in (new, assemble, screen, decompose, trace, verify, methods):
+for command in (new, assemble, screen, decompose, report, trace, verify, methods):
     main.add_command(command)

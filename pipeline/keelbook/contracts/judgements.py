@@ -15,7 +15,7 @@ from pydantic import AfterValidator, BaseModel, Field, ValidationInfo, field_val
 from pydantic_core import PydanticCustomError
 
 from keelbook.contracts.codes import DIMS, CodeLists
-from keelbook.contracts.loader import Declared, Place, fault, faults, parse_toml, validate
+from keelbook.contracts.loader import Declared, fault, faults, parse_toml, validate
 from keelbook.contracts.measures import PriceBasis, load_measures
 from keelbook.contracts.screening_rules import ScreeningRule
 from keelbook.errors import DeclarationError, Problem, did_you_mean
@@ -320,7 +320,9 @@ def load_acceptances(
             acceptance of a rule that must stop the run.
     """
     path = folder / ACCEPTANCES
-    refused = frozenset(name for name, rule in rules.items() if rule.severity == "stop" and not rule.acceptable)
+    refused = frozenset(
+        name for name, rule in rules.items() if rule.severity == "stop" and not rule.acceptable
+    )
     context = {"lists": lists, "sources": sources, "refused": refused}
     return _load(path, _Acceptances, "acceptance", context, twice="one acceptance of a finding")
 
@@ -332,16 +334,16 @@ def _load(
         return ()
     data, lines = parse_toml(path)
     declared = getattr(validate(data, lines, path, model, context), name)
-    entries = tuple(Entry(lines[_place(name, at)], one) for at, one in enumerate(declared))
+    entries = tuple(Entry(lines[name, at], one) for at, one in enumerate(declared))
     first: dict[tuple[Any, ...], int] = {}
     problems = []
     for entry in entries:
         said = entry.said
         about = (
-            getattr(said, "rule", ""),
             said.source,
             said.position,
             *(getattr(said, part, None) for part in (*DIMS, "measure", "price_basis", "time_period")),
+            *(getattr(said, part, None) for part in ("rule", "found")),
         )
         if about in first:
             problems.append(
@@ -358,7 +360,3 @@ def _load(
     if problems:
         raise DeclarationError(problems)
     return entries
-
-
-def _place(name: str, at: int) -> Place:
-    return (name, at)

@@ -58,6 +58,17 @@ def _stop_only(severity: str) -> str:
     return severity
 
 
+def _never_acceptable(acceptable: bool) -> bool:
+    if acceptable:
+        raise fault(
+            "a finding of this rule cannot be accepted",
+            found="acceptable = true",
+            expected="acceptable = false",
+            remedy="remove it: nobody can accept data of which it is not known what they say",
+        )
+    return acceptable
+
+
 def _not_empty(names: tuple[str, ...]) -> tuple[str, ...]:
     if not names:
         raise fault(
@@ -70,10 +81,14 @@ MeasureName = Annotated[str, AfterValidator(_known_measure)]
 Status = Annotated[str, AfterValidator(_known_status)]
 Severity = Literal["stop", "warn", "note"]
 StopOnly = Annotated[Severity, AfterValidator(_stop_only)]
+NeverAcceptable = Annotated[bool, AfterValidator(_never_acceptable)]
 
 
 class ScreeningRule(Declared):
-    """What every rule states: `level` is the ESS validation level, `reason` a clause, `remedy` what to do."""
+    """What every rule states: `level` is the ESS validation level, `reason` a clause, `remedy` what to do.
+
+    A finding that warns can be accepted by an entry of acceptances.toml; one that stops, if `acceptable`.
+    """
 
     id: Annotated[str, Field(pattern="^[a-z][a-z0-9_]*$")]
     kind: str
@@ -82,6 +97,7 @@ class ScreeningRule(Declared):
     reason: Text
     remedy: Text
     citation: Text
+    acceptable: bool = False
 
 
 class DuplicateKey(ScreeningRule):
@@ -89,6 +105,7 @@ class DuplicateKey(ScreeningRule):
 
     kind: Literal["duplicate_key"]
     severity: StopOnly
+    acceptable: NeverAcceptable = False
 
 
 class UnknownCode(ScreeningRule):
@@ -96,6 +113,7 @@ class UnknownCode(ScreeningRule):
 
     kind: Literal["unknown_code"]
     severity: StopOnly
+    acceptable: NeverAcceptable = False
 
 
 class Coverage(ScreeningRule):
@@ -193,6 +211,90 @@ class OutsidePeriod(ScreeningRule):
     kind: Literal["outside_period"]
 
 
+class Jump(ScreeningRule):
+    """Log growth of a series far from its own usual growth.
+
+    Far is more than `threshold` median absolute deviations from the median, and more than `least_deviation`
+    (a log change): a smooth series has no deviation to speak of. Growth is that over one year, also of quarters.
+    Figures of zero or less are passed over. A series needs `minimum_years` growth rates.
+    """
+
+    kind: Literal["jump"]
+    measures: Annotated[tuple[MeasureName, ...], AfterValidator(_not_empty)]
+    threshold: Annotated[float, Field(gt=0)]
+    least_deviation: Tolerance
+    minimum_years: Annotated[int, Field(ge=3)]
+
+
+class PartsTotal(ScreeningRule):
+    """A delivered total over `dimension` is the sum of the parts delivered beside it, at one price basis.
+
+    Parts are the codes without detail of their own, worker groups those of one partition; there must be two or
+    more. The difference may be `rounding_units` last printed digits of each figure plus `relative_tolerance` of
+    the total.
+    """
+
+    kind: Literal["parts_total"]
+    dimension: Literal["industry", "asset", "worker_group"]
+    price_bases: Annotated[tuple[PriceBasis, ...], AfterValidator(_not_empty)]
+    excluding: tuple[MeasureName, ...] = ()
+    rounding_units: Tolerance
+    relative_tolerance: Tolerance
+
+
+class PriceVolume(ScreeningRule):
+    """`measure` at current prices is its volume times the price on the reference year, where all are delivered.
+
+    The difference may be `rounding_units` last printed digits of each figure plus `relative_tolerance` of the
+    value.
+    """
+
+    kind: Literal["price_volume"]
+    measure: MeasureName
+    price: MeasureName
+    price_bases: Annotated[tuple[PriceBasis, ...], AfterValidator(_not_empty)]
+    rounding_units: Tolerance
+    relative_tolerance: Tolerance
+
+
+class Magnitude(ScreeningRule):
+    """A series about 10^`power` above or below the other series of its measure in the same source.
+
+    About is within `tolerance` (in powers of ten). It must also be more than `spread` median absolute deviations
+    from the median, so that sources whose series differ widely in size are left alone.
+    """
+
+    kind: Literal["magnitude"]
+    power: Annotated[float, Field(gt=0)]
+    tolerance: Tolerance
+    spread: Annotated[float, Field(gt=0)]
+    minimum_series: Annotated[int, Field(ge=3)]
+
+
+class Completeness(ScreeningRule):
+    """Every industry of an area for which one of `measures` is delivered has all of them.
+
+    `instead`: measure -> others that serve as well.
+    """
+
+    kind: Literal["completeness"]
+    measures: Annotated[tuple[MeasureName, ...], AfterValidator(_not_empty)]
+    instead: dict[MeasureName, tuple[MeasureName, ...]] = Field(default_factory=dict)
+
+    @model_validator(mode="after")
+    def _instead_of_named(self) -> "Completeness":
+        for name in self.instead:
+            if name not in self.measures:
+                raise fault(
+                    f"'{name}' is not one of the measures",
+                    at=("instead", name),
+                    found=name,
+                    expected="one of: " + ", ".join(self.measures),
+                    remedy=did_you_mean(name, self.measures) or "add it to measures",
+                )
+        return self
+
+
 KINDS: Mapping[str, type[ScreeningRule]] = {
     "duplicate_key": DuplicateKey,
     "unknown_code": UnknownCode,
@@ -203,6 +305,11 @@ KINDS: Mapping[str, type[ScreeningRule]] = {
     "range": Range,
     "status_mark": StatusMark,
     "outside_period": OutsidePeriod,
+    "jump": Jump,
+    "parts_total": PartsTotal,
+    "price_volume": PriceVolume,
+    "magnitude": Magnitude,
+    "completeness": Completeness,
 }
 
 

@@ -317,4 +317,4 @@ def _reached(conf: I1, rule: Span, x: F8) -> I1:
     first, n = np.maximum(spans.first, 0), np.arange(conf.shape[1])
     step = 1 if spans.step is None else spans.step
     last = np.minimum(first + (spans.length - 1) * step + 1, len(conf))
-    return ((spans.first >= 0) & (until[last, n] > until[first, n])).astype(np.int8)
+    return np.asarray((spans.first >= 0) & (until[last, n] > until[first, n]), np.int8)

@@ -9,7 +9,7 @@ approximation.
 """
 
 import math
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 
 import numpy as np
@@ -81,6 +81,83 @@ def readings(growth: Array, capital_share: Array) -> tuple[Array, Array]:
     masks it.
     """
     return np.asarray(growth / (1 - capital_share)), np.asarray(growth / capital_share)
+
+
+@dataclass(frozen=True)
+class Aggregation:
+    """What industries add to the residual of their total, in log growth; the total residual is the sum of all.
+
+    within: (M, ...) v_i dlnA_i, each industry's own residual by its share in value added.
+    output, capital, labour: R_V, R_K, R_L, what comes of moving value added, capital and labour between
+    industries that differ in price, return or pay.
+    """
+
+    within: Array
+    output: Array
+    capital: Array
+    labour: Array
+
+    def total(self) -> Array:
+        """Return sum_i v_i dlnA_i + R_V + R_K + R_L."""
+        return np.asarray(np.sum(self.within, axis=0) + self.output + self.capital + self.labour)
+
+
+def reallocation(
+    *,
+    value_share: Array,
+    industry_growth: tuple[Array, Array, Array],
+    industry_capital_share: Array,
+    total_growth: tuple[Array, Array, Array],
+    capital_share: Array,
+) -> Aggregation:
+    """Return the residual of a total as the residuals of its industries and the reallocation between them.
+
+    R_V = dlnV - sum v_i dlnV_i, R_K = sum v_i s_Ki dlnK_i - s_K dlnK, R_L = sum v_i s_Li dlnL_i - s_L dlnL,
+    with s_L = 1 - s_K; v and s are two-period means.
+
+    Args:
+        value_share: (M, ...) v_i of each industry in the value added of the total, summing to 1 over axis 0.
+        industry_growth: log growth of (output, capital, labour), each (M, ...).
+        industry_capital_share: (M, ...) s_Ki.
+        total_growth: log growth of (output, capital, labour) of the total, each (...).
+        capital_share: (...) s_K of the total.
+
+    Returns:
+        Aggregation, whose `total` is the residual of the total's own figures whatever the shares sum to.
+
+    Source: D. W. Jorgenson, F. M. Gollop and B. Fraumeni, 1987 (from memory).
+    """
+    output, capital, labour = industry_growth
+    of_capital, of_labour = contributions(capital, labour, industry_capital_share)
+    total_capital, total_labour = contributions(total_growth[1], total_growth[2], capital_share)
+    return Aggregation(
+        within=value_share * log_residual(output, capital, labour, industry_capital_share),
+        output=np.asarray(total_growth[0] - np.sum(value_share * output, axis=0)),
+        capital=np.asarray(np.sum(value_share * of_capital, axis=0) - total_capital),
+        labour=np.asarray(np.sum(value_share * of_labour, axis=0) - total_labour),
+    )
+
+
+def period_means(growth: Array, spans: Sequence[tuple[int, int]]) -> Array:
+    """Return the mean growth, or mean contribution, of each span of periods.
+
+    Means keep sums: those of the contributions and of the residual add up to that of output.
+
+    Args:
+        growth: (T,) or (T, N), log or discrete.
+        spans: (first, last) row of each span, both included.
+
+    Returns:
+        (S,) or (S, N). A span with a NaN in it has none: a mean of the rest would be of other periods.
+
+    Raises:
+        ValueError: a span that is empty or reaches outside the rows.
+    """
+    growth = np.asarray(growth)
+    wrong = [span for span in spans if not 0 <= span[0] <= span[1] < len(growth)]
+    if wrong:
+        raise ValueError(f"no such span of rows 0 to {len(growth) - 1}: {', '.join(map(str, wrong))}")
+    return np.asarray([growth[first : last + 1].mean(axis=0) for first, last in spans])
 
 
 @dataclass(frozen=True)

@@ -23,13 +23,47 @@ def unadjusted(d1: Array) -> Array:
     return np.asarray(d1)
 
 
+def imputed_labour(d1: Array, of_employees: Array, of_self: Array, relative_earnings: Array) -> Array:
+    """Return w H_s: the self-employed at the employees' rate D.1 / H_e times the relative-earnings factor.
+
+    Args:
+        of_employees, of_self: hours worked of the two groups, or persons of both.
+    """
+    return np.asarray(relative_earnings * d1 / of_employees * of_self)
+
+
 def by_hours(d1: Array, hours_employees: Array, hours_self: Array, relative_earnings: Array) -> Array:
     """Return D.1 + w H_s, with w the employees' hourly rate D.1 / H_e times the relative-earnings factor.
 
     Source: OECD, Compendium of Productivity Indicators 2019 (factor 1: compensation x hours of all persons
     / hours of employees).
     """
-    return np.asarray(d1 + relative_earnings * d1 / hours_employees * hours_self)
+    return np.asarray(d1 + imputed_labour(d1, hours_employees, hours_self, relative_earnings))
+
+
+def by_persons(d1: Array, employees: Array, self_employed: Array, relative_earnings: Array) -> Array:
+    """Return D.1 + w N_s, as `by_hours` with persons in place of hours.
+
+    Source: OECD, Compendium of Productivity Indicators 2019, for countries without hours of the self-employed.
+    """
+    return by_hours(d1, employees, self_employed, relative_earnings)
+
+
+def all_mixed(d1: Array, mixed: Array) -> Array:
+    """Return D.1 + MI: all mixed income B.3 counted as labour income.
+
+    Source: D. Gollin, Journal of Political Economy 110(2), 2002, first adjustment (second-hand).
+    """
+    return np.asarray(d1 + mixed)
+
+
+def proportional(d1: Array, mixed: Array, base: Array) -> Array:
+    """Return D.1 Y / (Y - MI): mixed income split as the rest of the income base Y is.
+
+    Its share in Y is D.1 / (Y - MI).
+    Source: D. Gollin, Journal of Political Economy 110(2), 2002, second adjustment (second-hand).
+    """
+    return np.asarray(d1 * base / (base - mixed))
 
 
 def fixed_fraction(d1: Array, mixed: Array, fraction: Array) -> Array:
@@ -38,6 +72,37 @@ def fixed_fraction(d1: Array, mixed: Array, fraction: Array) -> Array:
     Source: D. G. Johnson, 1954, with phi of two thirds (cited from memory).
     """
     return np.asarray(d1 + fraction * mixed)
+
+
+def asset_basis(d1: Array, mixed: Array, rate: Array, base_self: Array) -> Array:
+    """Return D.1 + MI - r_c B_s: mixed income less a return on the assets of the self-employed.
+
+    Args:
+        rate: r_c, the rate that exhausts operating surplus B.2 over the assets outside household enterprises.
+        base_self: B_s, the asset base of household enterprises, in currency of the period.
+
+    Source: asset basis of I. B. Kravis, American Economic Review, 1959 (from memory).
+    """
+    return np.asarray(d1 + mixed - rate * base_self)
+
+
+def reconciliation_factor(mixed: Array, labour_self: Array, capital_self: Array) -> Array:
+    """Return lambda = MI / (w H_s + C_s): what scales imputed labour and capital income to mixed income.
+
+    Args:
+        labour_self: w H_s, as `imputed_labour` gives it.
+        capital_self: C_s, capital costs of household enterprises at the rate of the others.
+    """
+    return np.asarray(mixed / (labour_self + capital_self))
+
+
+def reconciled(d1: Array, mixed: Array, labour_self: Array, capital_self: Array) -> Array:
+    """Return D.1 + lambda w H_s, with lambda of `reconciliation_factor`.
+
+    It has no meaning where mixed income is 0 or less: the caller leaves such periods out.
+    Source: practice of the United States Bureau of Labor Statistics (from memory).
+    """
+    return np.asarray(d1 + reconciliation_factor(mixed, labour_self, capital_self) * labour_self)
 
 
 def share(labour_income: Array, base: Array) -> Array:
@@ -56,6 +121,15 @@ def two_period_mean(previous: Array, current: Array) -> Array:
 
 
 LABOUR_INCOME: Mapping[str, Callable[..., Array]] = MappingProxyType(
-    {"unadjusted": unadjusted, "hours": by_hours, "fixed_fraction": fixed_fraction}
+    {
+        "unadjusted": unadjusted,
+        "hours": by_hours,
+        "persons": by_persons,
+        "all_mixed": all_mixed,
+        "proportional": proportional,
+        "fixed_fraction": fixed_fraction,
+        "asset_basis": asset_basis,
+        "reconciled": reconciled,
+    }
 )
-"""Every adjustment that needs no rate of return, by the name under which the panel keeps it."""
+"""Every adjustment, by the name under which the panel keeps it; the last two need a rate of return."""

@@ -138,6 +138,44 @@ def opening_remainder(weights: F8, growth: Array, T: int) -> Array:
     return np.asarray(left / opening_stock_profile(np.asarray(1.0), np.atleast_1d(growth), weights))
 
 
+def backcast_by_indicator(investment: Array, indicator: Array, linked: Array) -> Array:
+    """Return investment before the first period as it would be if it had followed an indicator.
+
+    I_{1-j} = X_{1-j} sum I / sum X, the sums over the window in which the two are linked.
+
+    Args:
+        investment: (W, N) volumes of the linking window.
+        indicator: (B, N) or (B, 1) X in the periods before the first, oldest first.
+        linked: (W, N) or (W, 1) X in the linking window.
+
+    Returns:
+        (B, N) volumes, to be put before the observed investment. NaN in, NaN out.
+
+    Raises:
+        ValueError: windows of different lengths; an indicator that sums to 0 or less in its window.
+    """
+    if len(investment) != len(linked):
+        raise ValueError(
+            f"the linking window has {len(investment)} periods of investment and {len(linked)} of the indicator"
+        )
+    level = np.asarray(np.sum(linked, axis=0))
+    if np.any(level.real <= 0):
+        raise ValueError("the indicator sums to 0 or less in the linking window: nothing can follow it")
+    return np.asarray(indicator * (np.sum(investment, axis=0) / level))
+
+
+def missing_part(left_out: Array, stock: Array) -> Array:
+    """Return K_ss / (K + K_ss): what a stock started from zero lacks, as a part of the whole.
+
+    Args:
+        left_out: K_ss, what is left in the period of the steady-state opening stock that was not entered.
+        stock: K, the stock started from zero, above 0 together with K_ss.
+
+    Periods are masked until this is under a declared limit.
+    """
+    return np.asarray(left_out / (stock + left_out))
+
+
 def half_life(rate: float) -> float:
     """Return the periods after which half of an opening stock is left: ln(1/2) / ln(1 - d), for d in (0, 1).
 

@@ -274,7 +274,7 @@ def _whole_lives(spread: Spread, mean_life: float) -> tuple[I8, F8]:
     mass = weights * spread.density(points)
     below = np.minimum(np.floor(life).astype(np.int64), longest - 1)
     nearer = life - below
-    masses = np.bincount(below, mass * (1 - nearer), longest + 1)
+    masses = np.asarray(np.bincount(below, mass * (1 - nearer), longest + 1), dtype=np.float64)
     masses += np.bincount(below + 1, mass * nearer, longest + 1)
     masses[1] += masses[0]
     which = np.flatnonzero(masses[1:]) + 1
@@ -287,10 +287,6 @@ def _with_mean(which: I8, masses: F8, mean: float) -> tuple[I8, F8]:
     Newton steps on the logarithm of the sum of masses, which is convex in theta, inside a bracket that every
     step narrows.
     """
-    if not which[0] < mean < which[-1]:
-        raise ValueError(
-            f"a mean life of {mean:g} lies outside the lives of {which[0]} to {which[-1]} that the cuts leave"
-        )
     distance = which - mean
     log_mass = np.log(masses)
     theta, low, high = 0.0, -math.inf, math.inf

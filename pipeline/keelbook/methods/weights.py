@@ -194,9 +194,7 @@ def _given_price(
     rho = require("the discount rate", discount_rate, low=-1, open_low=True)
 
     def price(ages: F8) -> F8:
-        return _mean(
-            lambda one, at: direct_age_price(form, at, life=one, factor=factor), which, masses, ages
-        )
+        return _mean(lambda one, at: direct_age_price(form, at, life=one, factor=factor), which, masses, ages)
 
     whole = np.arange(which[-1] + 2, dtype=np.float64)
     z = price(whole)

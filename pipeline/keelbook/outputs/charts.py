@@ -50,10 +50,17 @@ class Size:
     right: int
     names: bool
 
+    @property
+    def letters(self) -> int:
+        """How many letters of a label fit into the right margin."""
+        return int((self.right - 16) / LETTER)
 
+
+LETTER = 6.2
 WIDE = Size(940, 350, 236, names=True)
 NARROW = Size(352, 290, 66, names=False)
 SMALL = Size(300, 184, 56, names=False)
+NARROW_WORDS, SMALL_WORDS = Size(352, 290, 108, names=False), Size(300, 184, 104, names=False)
 LEFT, TOP, BOTTOM = 48, 26, 24
 LABEL_GAP = 13.5
 ROW, ROW_NAME = 26, 300
@@ -91,7 +98,7 @@ def axis(values: Iterable[Value], zero: bool, ticks: int = 5) -> Axis:
 
 
 def stack(curves: Sequence[Curve]) -> list[list[tuple[float, float] | None]]:
-    """Return (from, to) of every part, positive parts upwards and negative ones downwards; None where one is missing."""
+    """Return (from, to) of every part: positive ones go up, negative ones down; None where any is missing."""
     out: list[list[tuple[float, float] | None]] = [[] for _ in curves]
     for values in zip(*(c.values for c in curves), strict=True):
         up = down = 0.0
@@ -121,7 +128,9 @@ def line_chart(text: Text, years: Sequence[int], curves: Sequence[Curve], scale:
         for run in _runs(curve.values):
             points = [(plot.x(i), plot.y(v)) for i, v in run]
             if len(points) == 1:
-                out.append(f'<circle cx="{points[0][0]:.1f}" cy="{points[0][1]:.1f}" r="2" fill="{curve.colour}"/>')
+                out.append(
+                    f'<circle cx="{points[0][0]:.1f}" cy="{points[0][1]:.1f}" r="2" fill="{curve.colour}"/>'
+                )
             else:
                 path = "M" + "L".join(f"{x:.1f} {y:.1f}" for x, y in points)
                 out.append(f'<path d="{path}" fill="none" stroke="{curve.colour}" stroke-width="{width}"/>')
@@ -150,8 +159,9 @@ def area_chart(text: Text, years: Sequence[int], curves: Sequence[Curve], scale:
                     f'<path d="M{"L".join(top + base)}Z" fill="{curve.colour}" stroke="#fff" stroke-width="0.7"/>'
                 )
         if known[-1]:
-            i, pair = known[-1][-1]
-            labels.append((curve, plot.x(i), plot.y(sum(pair) / 2)))
+            i, (low, high) = known[-1][-1]
+            if plot.y(low) - plot.y(high) > 0.5:
+                labels.append((curve, plot.x(i), plot.y((low + high) / 2)))
     out.append(plot.labels(labels))
     return _svg(text, size.width, size.height, out)
 
@@ -181,7 +191,7 @@ def bar_chart(
         path = "M" + "L".join(f"{x:.1f} {y:.1f}" for x, y in points)
         out.append(f'<path d="{path}" fill="none" stroke="{line.colour}" stroke-width="1.8"/>')
         out += [
-            f'<circle cx="{x:.1f}" cy="{y:.1f}" r="2.4" fill="#fff" stroke="{line.colour}" stroke-width="1.4"/>'
+            f'<circle cx="{x:.1f}" cy="{y:.1f}" r="{2.4 if size.names else 1.5}" fill="#fff" stroke="{line.colour}" stroke-width="1.4"/>'
             for x, y in points
         ]
     end = _last(line.values)
@@ -196,29 +206,25 @@ def row_chart(
 ) -> Markup:
     """Return one stacked bar a row, its name beside it (above it when narrow), its sum marked and written."""
     left = ROW_NAME if size.names else 8
-    row = ROW if size.names else ROW + 14
+    row = ROW if size.names else ROW + 16
     right = size.width - 52
     bottom = TOP + row * len(rows)
 
     def x(value: float) -> float:
         return left + (value - scale.low) / (scale.high - scale.low) * (right - left)
 
-    out = [_words(right, 12, text.unit, "end", "u"), _words(size.width, 12, sums.name, "end", "u b")]
-    if size.names:
-        out[0] = _words(left, 12, text.unit, "start", "u")
-    else:
-        out[0] = _words(left, 12, text.unit, "start", "u")
+    out = [_words(left, 12, text.unit, "start", "u"), _words(size.width, 12, sums.name, "end", "u b")]
     for tick in scale.ticks:
         out.append(_line(x(tick), TOP - 6, x(tick), bottom, INK if abs(tick) < scale.step / 1e6 else RULE))
         out.append(_words(x(tick), bottom + 15, scale.label(tick), "middle", "t"))
     stacks = stack(parts)
     for i, name in enumerate(rows):
-        y = TOP + row * i + (2 if size.names else 15)
-        height = row - (9 if size.names else 22)
+        y = TOP + row * i + (2 if size.names else 17)
+        height = row - (9 if size.names else 26)
         if size.names:
             out.append(_words(left - 10, y + height / 2 + 4, _cut(name, 44), "end", "n"))
         else:
-            out.append(_words(left, y - 3, _cut(name, 50), "start", "n halo"))
+            out.append(_words(left, y - 4, _cut(name, 50), "start", "n halo"))
         for curve, pairs in zip(parts, stacks, strict=True):
             pair = pairs[i]
             if pair is not None and pair[0] != pair[1]:
@@ -261,7 +267,8 @@ class _Plot:
             base = tick == self._scale.low
             out.append(_line(LEFT, y, self._right, y, MUTED if base else RULE))
             out.append(_words(LEFT - 6, y + 4, self._scale.label(tick), "end", "t"))
-        every = next((e for e in (1, 2, 5, 10, 20, 50) if self.step * e >= 34), 100)
+        room = 48 if self._size.names else 34
+        every = next((e for e in (1, 5, 10, 20, 50) if self.step * e >= room), 100)
         for i, year in enumerate(self._years):
             if year % every == 0:
                 out.append(_line(self.x(i), self._bottom, self.x(i), self._bottom + 4, MUTED))
@@ -284,7 +291,7 @@ class _Plot:
                 f'<path d="M{x + 3:.1f} {y:.1f}L{start - 3:.1f} {at:.1f}" fill="none" stroke="{curve.colour}" '
                 f'stroke-width="{2.6 if curve.strong else 1.5}"/>'
             )
-            name = _cut(curve.name, 33) if self._size.names else _cut(curve.code, 8)
+            name = _cut(curve.name if self._size.names else curve.code, self._size.letters)
             out.append(_words(start, at + 4, name, "start", "n b" if curve.strong else "n"))
         return "".join(out)
 

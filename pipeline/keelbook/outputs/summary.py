@@ -63,7 +63,12 @@ def _figures(stages: pd.DataFrame, name: str) -> int:
 
 def _findings(found: pd.DataFrame) -> list[str]:
     counts = found["severity"].value_counts()
-    texts = [f"{int(counts.get(name, 0)):,} {name}" for name in ("stop", "warn", "note")]
+    accepted = found.loc[found["accepted_by"] != "", "severity"].value_counts()
+    texts = [
+        f"{int(counts.get(name, 0)):,} {name}"
+        + (f" ({int(accepted[name]):,} accepted)" if name in accepted else "")
+        for name in ("stop", "warn", "note")
+    ]
     lines = [f"Findings   {', '.join(texts)}"]
     for row in found.head(SHOWN_FINDINGS).to_dict("records"):
         problem: Any = as_problem(row)

@@ -1,6 +1,7 @@
 """A trace as text: the figure, its formula and parameters, its terms, and the way down to the cells."""
 
 from collections.abc import Iterator
+from dataclasses import asdict
 from typing import Any
 
 from keelbook.audit.reading import Build, Cell
@@ -61,6 +62,13 @@ def _cell(cell: Cell, indent: str) -> Iterator[str]:
         f'{indent}{shown(cell.file)}{sheet}, {place}: "{shown(cell.raw)}" '
         f"(source '{cell.source}', status {cell.status}, sha256 {cell.sha256[:12]})"
     )
+    made = cell.correction
+    if made is not None:
+        old = "no figure" if made.old is None else repr(made.old)
+        yield (
+            f"{indent}corrected from {old} to {made.new!r} by {shown(made.author)} on {made.date}: "
+            f"{shown(made.reason)} ({made.file}, line {made.line})"
+        )
 
 
 def _unit(traced: Traced) -> str:
@@ -119,5 +127,6 @@ def _term_json(build: Build, item: Input, depth: int) -> dict[str, Any]:
             "address": address(item.cell.row, item.cell.column),
             "raw": item.cell.raw,
             "obs_status": item.cell.status,
+            "correction": None if item.cell.correction is None else asdict(item.cell.correction),
         }
     return out

@@ -11,7 +11,7 @@ from keelbook.lineage.formula import Formula, Role, Setting
 from keelbook.lineage.primitives import Each, Span
 from keelbook.methods.growth import discrete_growth, log_growth, log_residual
 from keelbook.stages.base import CHOSEN, Inputs, Result, Stage, keys, missing_input
-from keelbook.stages.services import chained
+from keelbook.stages.chaining import chained
 from keelbook.stages.totals import TOTAL
 
 OUTPUT = BlockKey("value_added", CHOSEN, "constant")

@@ -105,7 +105,7 @@ def fill(block: Block, method: Choice, longest: Choice) -> tuple[Block | None, l
     before, after = _neighbours(block.value)
     gap = np.isnan(block.value) & (before >= 0) & (after >= 0)
     fillable = gap & (after - before - 1 <= int(longest.value))
-    mine = fillable.any(axis=0)
+    mine = np.asarray(fillable.any(axis=0))
     if method.value == "constant_growth":
         with np.errstate(invalid="ignore"):
             mine &= ~(block.value <= 0).any(axis=0)
@@ -157,7 +157,7 @@ def link(index: Block, earlier: Block) -> tuple[Block | None, list[dict[str, Any
     columns = earlier.series.locate(index.series.key)
     old = np.where(columns >= 0, earlier.value[:, np.maximum(columns, 0)], np.nan)
     common = np.isfinite(index.value) & np.isfinite(old)
-    mine = common.any(axis=0)
+    mine = np.asarray(common.any(axis=0))
     findings = [
         note(
             "no_overlap",

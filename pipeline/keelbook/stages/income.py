@@ -19,7 +19,7 @@ from keelbook.methods.income_shares import (
     unadjusted,
 )
 from keelbook.stages.base import CHOSEN, Book, Inputs, Result, Stage, keys, missing_input, note
-from keelbook.stages.totals import TOTAL, totals
+from keelbook.stages.totals import TOTAL, total_of, totals
 
 EMPLOYEES, SELF_EMPLOYED = "SAL", "SELF"
 """Codes of the partition of workers by status (rules/codes/worker_group.csv)."""
@@ -221,9 +221,12 @@ def choose(base: Block, forms: Mapping[str, Block], cascade: tuple[str, ...]) ->
 
 
 def _summed_totals(base: Block) -> SeriesIndex:
-    """Return the series of the base that are totals of industries which are there themselves."""
-    parts = base.series.take(base.part & ~base.series.is_code("industry", TOTAL))
-    return SeriesIndex(base.series.table, np.unique(parts.projected({"industry": TOTAL})))
+    """Return the series of the base that are totals of industries or sectors which are there themselves."""
+    parts = base.series.take(base.part)
+    keys = [parts.projected(total_of(*dims)) for dims in (("industry",), ("sector",), ("industry", "sector"))]
+    wanted = np.unique(np.concatenate(keys))
+    wanted = wanted[~np.isin(wanted, parts.key)]
+    return SeriesIndex(base.series.table, wanted[base.series.locate(wanted) >= 0])
 
 
 def _shares(labour_income: Block, base: Block) -> list[Block]:
@@ -267,7 +270,7 @@ def _over_industries(base: Block, blocks: list[Block]) -> list[Block]:
         return []
     wanted = _summed_totals(base)
     out = []
-    for block in totals(chosen, ("industry",), OVER_INDUSTRIES):
+    for block in totals(chosen, ("industry", "sector"), OVER_INDUSTRIES):
         kept = block.take(wanted.locate(block.series.key) >= 0)
         if len(kept.series):
             out.extend(_shares(kept, base))

@@ -22,10 +22,12 @@ from keelbook.readers.numbers import NumberFormat, split_footnote
 from keelbook.readers.periods import expected_period, parse_period
 from keelbook.readers.place import Place
 from keelbook.readers.staging import TABLE, Reading, Staged, TextColumn, read_staged
+from keelbook.stages import corrections
 
 if TYPE_CHECKING:
     from keelbook.assembly.declaration import Assembly, Source
     from keelbook.contracts.codes import CodeLists
+    from keelbook.contracts.judgements import Correction, Entry
     from keelbook.contracts.measures import Measure
 
 MISSING_STATUSES = frozenset("HLMOQ")
@@ -55,13 +57,14 @@ class Intake:
 
     `observations`: one row per observation, with or without a figure; texts are categories whose codes,
     below the length of the code list, are positions in it. `counts`: per source, cells = observations +
-    rejected + missing.
+    rejected + missing. `corrections`: the table `correction` (see stages/corrections.py).
     """
 
     observations: pd.DataFrame
     findings: pd.DataFrame
     sources: pd.DataFrame
     counts: pd.DataFrame
+    corrections: pd.DataFrame
 
 
 @dataclass(frozen=True, eq=False)
@@ -126,10 +129,12 @@ def take_in(
 ) -> Intake:
     """Read every declared source into `source_file`, `source_cell` and `rejected_cell`, and return the rest.
 
-    A source that cannot be read gives findings and does not keep the others from being read.
+    A source that cannot be read gives findings and does not keep the others from being read. The assembly's
+    corrections are applied to what was read, before a cell is rejected for its figure.
 
     Raises:
-        DeclarationError, SourceMissing: see `source_paths`.
+        DeclarationError, SourceMissing: see `source_paths`; a correction means no figure, several, or one that is
+            not as it expects (all such corrections are named).
         RuntimeError: cells in differ from observations + rejected + missing (a fault of this program).
     """
     paths = source_paths(assembly)
@@ -139,6 +144,8 @@ def take_in(
     taken: list[_Taken] = []
     found: list[pd.DataFrame] = []
     counts: list[dict[str, Any]] = []
+    hits: list[corrections.Hit] = []
+    unread: set[str] = set()
     next_cell = 0
     for file_id, source in enumerate(assembly.sources):
         if progress is not None:
@@ -156,18 +163,65 @@ def take_in(
             reading = read_staged(con, staged, form, lists.codes("obs_status"), file_id, next_cell)
             con.execute(f"drop table {TABLE}")
             part, faults = _observe(reading, source, lists, file_id, next_cell)
+            part = _with_defaults(part, source, assembly, measures)
+            if assembly.corrections:
+                part, faults, own = _corrected(con, part, faults, source, assembly.corrections, lists)
+                hits += own
+            part = _without(part, faults)
             found.append(_reject(con, faults, reading, source, place, next_cell))
-            taken.append(_with_defaults(part, source, assembly, measures))
+            taken.append(part)
             count |= _count(con, file_id, part)
             if not len(reading.value):
                 found.append(finding_frames.frame([_no_cells(place)]))
             next_cell += len(reading.value)
+        else:
+            unread.add(source.name)
         counts.append(count)
+    wrong = corrections.problems(assembly.corrections, hits, unread)
+    if wrong:
+        raise DeclarationError(wrong)
     return Intake(
         _stack(taken, assembly, lists, measures),
         finding_frames.concat(found),
         files,
         pd.DataFrame(counts, columns=["source", "cells", "observations", "rejected", "missing"]),
+        corrections.rows(assembly.corrections, hits),
+    )
+
+
+def _corrected(
+    con: duckdb.DuckDBPyConnection,
+    part: _Taken,
+    faults: dict[int, tuple[str, str]],
+    source: "Source",
+    entries: "Sequence[Entry[Correction]]",
+    lists: "CodeLists",
+) -> tuple[_Taken, dict[int, tuple[str, str]], list[corrections.Hit]]:
+    file = source.file if source.excel is None else f"{source.file}, sheet '{source.excel.sheet}'"
+    cells = corrections.Cells(source.name, source.frequency, file, part.texts, part.arrays, faults)
+    where = corrections.located(cells, entries)
+    if not where:
+        return part, faults, []
+    meant = pd.DataFrame(
+        {"cell_id": part.arrays["cell_id"][[at for found in where.values() for at in found]]}
+    )
+    con.register("meant", meant)
+    raw = dict(con.execute("select cell_id, raw from source_cell semi join meant using (cell_id)").fetchall())
+    con.unregister("meant")
+    statuses = corrections.Statuses(lists.codes("obs_status"), MISSING_STATUSES)
+    cells, hits = corrections.correct(cells, entries, where, raw, statuses)
+    return _Taken(cells.texts, cells.arrays), dict(cells.faults), hits
+
+
+def _without(part: _Taken, faults: Mapping[int, tuple[str, str]]) -> _Taken:
+    """Return the cells that are not refused."""
+    if not faults:
+        return part
+    keep = np.ones(len(part.arrays["value"]), dtype=bool)
+    keep[list(faults)] = False
+    return _Taken(
+        {role: TextColumn(column.labels, column.codes[keep]) for role, column in part.texts.items()},
+        {name: array[keep] for name, array in part.arrays.items()},
     )
 
 
@@ -216,7 +270,7 @@ def _source_files(
 def _observe(
     reading: Reading, source: "Source", lists: "CodeLists", file_id: int, first_cell: int
 ) -> tuple[_Taken, dict[int, tuple[str, str]]]:
-    """Give every cell its period, status and labels; return the usable ones, and why the rest are not."""
+    """Give every cell its period, status and labels, and say why some of them are not usable."""
     size = len(reading.value)
     faults = dict(reading.faults)
 
@@ -265,25 +319,21 @@ def _observe(
         refuse(given == -2, "unreadable_status", lambda at: _unknown_mark(column, at))
         conf = np.where(given >= 0, given, conf).astype(np.int8)
 
-    keep: slice | NDArray[np.bool_] = slice(None)
-    if faults:
-        keep = np.ones(size, dtype=bool)
-        keep[list(faults)] = False
     labels = {
-        role: TextColumn(_codes_of(column.labels, role, source), column.codes[keep])
+        role: TextColumn(_codes_of(column.labels, role, source), column.codes)
         for role, column in reading.texts.items()
         if role in (*DIMS, "measure")
     }
     arrays: dict[str, NDArray[Any]] = {
-        "period": period[keep],
-        "value": reading.value[keep],
-        "obs_status": status[keep],
-        "conf_status": conf[keep],
-        "cell_id": np.arange(first_cell, first_cell + size, dtype=np.int64)[keep],
-        "file_id": np.full(size, file_id, dtype=np.int16)[keep],
-        "unit_mult": np.full(size, source.unit_mult, dtype=np.int8)[keep],
-        "row": reading.row[keep],
-        "column": reading.column[keep],
+        "period": period,
+        "value": reading.value,
+        "obs_status": status,
+        "conf_status": conf,
+        "cell_id": np.arange(first_cell, first_cell + size, dtype=np.int64),
+        "file_id": np.full(size, file_id, dtype=np.int16),
+        "unit_mult": np.full(size, source.unit_mult, dtype=np.int8),
+        "row": reading.row,
+        "column": reading.column,
     }
     return _Taken(labels, arrays), faults
 

@@ -89,6 +89,15 @@ class Observed:
         return np.repeat(numbers, np.diff(starts, append=len(self)))
 
     @cached_property
+    def first_rows(self) -> Ints:
+        """The first row of each series, by its number."""
+        if not len(self):
+            return np.zeros(0, dtype=np.int64)
+        first = np.empty(int(self.series.max()) + 1, dtype=np.int64)
+        first[self.series[::-1]] = np.arange(len(self) - 1, -1, -1)
+        return first
+
+    @cached_property
     def parts(self) -> list[Part]:
         """The observations by frequency."""
         codes = self.codes("frequency")

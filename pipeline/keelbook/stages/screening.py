@@ -7,15 +7,12 @@ breaks any other rule.
 """
 
 from collections.abc import Callable, Mapping, Sequence
-from dataclasses import dataclass, field
 from typing import Any
 
 import numpy as np
 import pandas as pd
 
 from keelbook import errors, findings
-from keelbook.contracts.codes import CodeLists
-from keelbook.contracts.measures import Measure
 from keelbook.contracts.screening_rules import (
     Coverage,
     DuplicateKey,
@@ -39,38 +36,22 @@ from keelbook.stages.observed import (
     period_name,
     spans,
 )
-
-CODED = ("measure", "sector", "industry", "asset", "worker_group")
-NOT_A_PART = ("_T", "_Z")
-
-LISTED = 10_000
-"""Most findings a rule lists one by one; a last finding counts those beyond, so that a file delivered twice
-does not write millions of them."""
+from keelbook.stages.screening_levels import check_jump, check_magnitude
+from keelbook.stages.screening_relations import check_completeness, check_parts_total, check_price_volume
+from keelbook.stages.screening_report import (
+    CODED,
+    LISTED,
+    NOT_A_PART,
+    ScreeningContext,
+    base_unit,
+    figure,
+    last_digits,
+    partition_of,
+    remark,
+    report,
+)
 
 LISTED_CODES = 5
-SAMPLE = 10_000
-MOST_DECIMALS = 9
-
-
-@dataclass(frozen=True)
-class ScreeningContext:
-    """What the rules need beside the observations.
-
-    `period` is the assembly's first and last year; `files` maps file_id to the file's name; `sheet_of`
-    returns the sheet of each cell_id ("" for CSV); `labels` holds, per dimension, the labels the sources
-    declare and their codes.
-    """
-
-    period: tuple[int, int]
-    lists: CodeLists
-    measures: Mapping[str, Measure]
-    files: Mapping[int, str]
-    sheet_of: Callable[[Sequence[int]], Sequence[str]]
-    labels: Mapping[str, Mapping[str, str]] = field(default_factory=dict)
-
-
-def _figure(value: float) -> str:
-    return f"{value:.10g}"
 
 
 def _counted(count: int, what: str) -> str:
@@ -91,65 +72,6 @@ def _cells(observed: Observed, context: ScreeningContext, rows: Ints) -> list[st
         f"{context.files[file]}" + (f", sheet '{sheet}'" if sheet else "") + f", row {row}, column {column}"
         for file, sheet, row, column in places
     ]
-
-
-def _report(
-    observed: Observed,
-    rule: ScreeningRule,
-    context: ScreeningContext,
-    rows: Ints,
-    *,
-    message: str,
-    found: Callable[[Ints], Sequence[str]] | Sequence[str],
-    expected: str | Sequence[str],
-    remedy: str | Sequence[str] = "",
-    severity: str = "",
-    time_period: Sequence[str] | None = None,
-) -> pd.DataFrame:
-    """Return one finding for each of `rows`, at its cell; one more counts those beyond `LISTED`."""
-    if not len(rows):
-        return findings.frame()
-    shown = rows[:LISTED]
-    frame = observed.frame
-    listed = pd.DataFrame(
-        {
-            "file": [context.files[file] for file in frame["file_id"].to_numpy()[shown].tolist()],
-            "sheet": list(context.sheet_of(frame["cell_id"].to_numpy()[shown].tolist())),
-            "row": frame["row"].to_numpy()[shown],
-            "column": frame["column"].to_numpy()[shown],
-            **{name: observed.text(name, shown) for name in (*CODED, "area")},
-            "time_period": observed.period_text(shown) if time_period is None else list(time_period)[:LISTED],
-            "found": list(found(shown) if callable(found) else found[:LISTED]),
-            "expected": expected if isinstance(expected, str) else list(expected)[:LISTED],
-            "remedy": (remedy or rule.remedy) if isinstance(remedy, str) else list(remedy)[:LISTED],
-        }
-    )
-    listed["rule"], listed["level"], listed["message"] = rule.id, rule.level, f"{message}: {rule.reason}"
-    listed["severity"] = severity or rule.severity
-    if len(rows) == len(shown):
-        return findings.frame(listed)
-    rest = _remark(
-        rule,
-        message=message,
-        found=f"{len(rows) - len(shown)} more like the {len(shown)} listed",
-        severity=severity or rule.severity,
-    )
-    return pd.concat([findings.frame(listed), rest], ignore_index=True)
-
-
-def _remark(rule: ScreeningRule, *, message: str, found: str, severity: str) -> pd.DataFrame:
-    return findings.frame(
-        [
-            {
-                "rule": rule.id,
-                "severity": severity,
-                "level": rule.level,
-                "message": f"{message}: {rule.reason}",
-                "found": found,
-                "remedy": rule.remedy,
-            }
-        ]
-    )
 
 
 def check_duplicate_key(observed: Observed, rule: DuplicateKey, context: ScreeningContext) -> pd.DataFrame:
@@ -176,9 +98,9 @@ def check_duplicate_key(observed: Observed, rule: DuplicateKey, context: Screeni
         return findings.frame()
     cells = np.concatenate(groups)
     places = zip(observed.value[cells].tolist(), _cells(observed, context, cells), strict=True)
-    texts = [f"{_figure(value)} ({place})" for value, place in places]
+    texts = [f"{figure(value)} ({place})" for value, place in places]
     ends = np.cumsum([len(group) for group in groups]).tolist()
-    return _report(
+    return report(
         observed,
         rule,
         context,
@@ -220,7 +142,7 @@ def check_unknown_code(observed: Observed, rule: UnknownCode, context: Screening
         labels = observed.text(dimension, firsts)
         close = [_close_codes(label, dimension, names, context) for label in labels]
         reports.append(
-            _report(
+            report(
                 observed,
                 rule,
                 context,
@@ -328,7 +250,7 @@ def check_coverage(observed: Observed, rule: Coverage, context: ScreeningContext
             first_gaps.append(period_name(int(gaps[0]), part.frequency))
     if not series_seen:
         return findings.frame()
-    return _report(
+    return report(
         observed,
         rule,
         context,
@@ -370,13 +292,13 @@ def check_sign(observed: Observed, rule: Sign, context: ScreeningContext) -> pd.
     measures = rule.measures or [name for name, measure in context.measures.items() if measure.positive]
     rows = np.flatnonzero(observed.value < 0)
     rows = rows[observed.among("measure", set(measures) - set(rule.excluding), rows)]
-    return _report(
+    return report(
         observed,
         rule,
         context,
         rows,
         message="a negative figure",
-        found=lambda shown: [_figure(value) for value in observed.value[shown]],
+        found=lambda shown: [figure(value) for value in observed.value[shown]],
         expected="0 or more",
     )
 
@@ -386,20 +308,15 @@ def check_nonpositive_index(
 ) -> pd.DataFrame:
     """Find index numbers, which their price basis tells, that are zero or negative."""
     rows = np.flatnonzero(observed.value <= 0)
-    return _report(
+    return report(
         observed,
         rule,
         context,
         rows[observed.among("price_basis", rule.price_bases, rows)],
         message="an index or price that is not above zero",
-        found=lambda shown: [_figure(value) for value in observed.value[shown]],
+        found=lambda shown: [figure(value) for value in observed.value[shown]],
         expected="more than 0",
     )
-
-
-def _base_unit(observed: Observed, rows: Ints) -> Floats:
-    """Return the figures of some rows without their unit multiplier."""
-    return observed.value[rows] * 10.0 ** observed.frame["unit_mult"].to_numpy()[rows].astype(np.float64)
 
 
 def check_range(observed: Observed, rule: Range, context: ScreeningContext) -> pd.DataFrame:
@@ -426,27 +343,27 @@ def check_range(observed: Observed, rule: Range, context: ScreeningContext) -> p
         shared = ("frequency", "area", "sector", "industry", "asset", "worker_group")
         key = dense_numbers([*(observed.codes(name)[both] for name in shared), observed.period[both]])
         divisor = np.full(int(key.max()) + 1, np.nan)
-        divisor[key[len(rows) :]] = _base_unit(observed, below)
+        divisor[key[len(rows) :]] = base_unit(observed, below)
         divisor[divisor == 0] = np.nan
-        tested = _base_unit(observed, rows) / divisor[key[: len(rows)]]
+        tested = base_unit(observed, rows) / divisor[key[: len(rows)]]
     with np.errstate(invalid="ignore"):
         out = (tested < low) | (tested > high)
     bounds = [
         text
         for text, given in (
-            (f"at least {_figure(low)}", rule.minimum),
-            (f"at most {_figure(high)}", rule.maximum),
+            (f"at least {figure(low)}", rule.minimum),
+            (f"at most {figure(high)}", rule.maximum),
         )
         if given is not None
     ]
     what = "a figure" if rule.per is None else f"a figure per {rule.per.replace('_', ' ')}"
-    return _report(
+    return report(
         observed,
         rule,
         context,
         rows[out],
         message=f"{what} outside the plausible range",
-        found=[_figure(value) for value in tested[out][:LISTED]],
+        found=[figure(value) for value in tested[out][:LISTED]],
         expected=" and ".join(bounds),
     )
 
@@ -475,7 +392,7 @@ def check_status_mark(observed: Observed, rule: StatusMark, context: ScreeningCo
             for row, group, frequency in zip(shown.tolist(), groups, frequencies, strict=False)
         ]
 
-    return _report(
+    return report(
         observed,
         rule,
         context,
@@ -501,7 +418,7 @@ def check_outside_period(observed: Observed, rule: OutsidePeriod, context: Scree
     _, first, counts = np.unique(number, return_index=True, return_counts=True)
     frequencies = observed.text("frequency", rows[first])
     periods = [np.unique(observed.period[rows[number == index]]) for index in range(len(first))]
-    return _report(
+    return report(
         observed,
         rule,
         context,
@@ -531,7 +448,7 @@ def check_identity(observed: Observed, rule: Identity, context: ScreeningContext
     if len(absent) == len(members):
         return findings.frame()
     if absent:
-        return _remark(
+        return remark(
             rule,
             message="the identity was not applied",
             found=f"no series at price basis '{rule.price_basis}' of: {', '.join(absent)}",
@@ -540,8 +457,8 @@ def check_identity(observed: Observed, rule: Identity, context: ScreeningContext
     shared = ("frequency", "area", "sector", "industry")
     key = dense_numbers([*(observed.codes(name)[rows] for name in shared), observed.period[rows]])
     count = int(key.max()) + 1
-    values = _base_unit(observed, rows)
-    digits = _last_digits(observed, rows)
+    values = base_unit(observed, rows)
+    digits = last_digits(observed, rows)
     summed: dict[str, Floats] = {}
     rounding = np.zeros(count)
     for name in members:
@@ -561,13 +478,13 @@ def check_identity(observed: Observed, rule: Identity, context: ScreeningContext
     def listed(shown: Ints) -> list[str]:
         texts = []
         for group, factor in zip(broken[: len(shown)].tolist(), scale.tolist(), strict=False):
-            parts = [f"{name} {_figure(summed[name][group] * factor)}" for name in rule.terms]
+            parts = [f"{name} {figure(summed[name][group] * factor)}" for name in rule.terms]
             difference = (total[group] - terms[:, group].sum()) * factor
             terms_text = f"terms: {', '.join(parts)}"
-            texts.append(f"{_figure(total[group] * factor)}; {terms_text}; difference {_figure(difference)}")
+            texts.append(f"{figure(total[group] * factor)}; {terms_text}; difference {figure(difference)}")
         return texts
 
-    stop = _report(
+    stop = report(
         observed,
         rule,
         context,
@@ -575,7 +492,7 @@ def check_identity(observed: Observed, rule: Identity, context: ScreeningContext
         message=f"{rule.total} is not the sum of its terms",
         found=listed,
         expected=[
-            f"{_figure(terms[:, group].sum() * factor)} within {_figure(allowed[group] * factor)}"
+            f"{figure(terms[:, group].sum() * factor)} within {figure(allowed[group] * factor)}"
             for group, factor in zip(broken[:LISTED].tolist(), scale.tolist(), strict=False)
         ],
     )
@@ -597,7 +514,7 @@ def _untested(
         + ", first here"
         for missing, count in zip(sets.T, counts.tolist(), strict=True)
     ]
-    return _report(
+    return report(
         observed,
         rule,
         context,
@@ -621,7 +538,7 @@ def _group_figures(
     if not parts.any():
         return out
     groups = observed.text("worker_group", rows[parts])
-    partitions = {code: _partition(code, context) for code in set(groups)}
+    partitions = {code: partition_of(code, context) for code in set(groups)}
     names, numbers = np.unique([partitions[code] for code in groups], return_inverse=True)
     delivered = np.zeros((len(names), count), dtype=np.bool_)
     delivered[numbers, key[parts]] = True
@@ -629,36 +546,6 @@ def _group_figures(
     one = delivered.sum(axis=0) == 1
     out[one] = sums[one]
     return out
-
-
-def _partition(worker_group: str, context: ScreeningContext) -> str:
-    if not context.lists.has("worker_group", worker_group):
-        return worker_group
-    return context.lists.partition("worker_group", worker_group) or worker_group
-
-
-def _last_digits(observed: Observed, rows: Ints) -> Floats:
-    """Return the unit of the last printed digit of each figure, in single units.
-
-    Figures of one source, measure and multiplier are printed alike: with the most decimals that any of them
-    has (looked up in an even sample where there are many).
-    """
-    mult = observed.frame["unit_mult"].to_numpy()[rows]
-    number = dense_numbers([observed.codes("source")[rows], observed.codes("measure")[rows], mult])
-    out = np.empty(len(rows))
-    for index in range(int(number.max()) + 1):
-        own = np.flatnonzero(number == index)
-        sample = observed.value[rows[own[:: len(own) // SAMPLE + 1]]]
-        out[own] = 10.0 ** (int(mult[own[0]]) - _decimals(sample[~np.isnan(sample)]))
-    return out
-
-
-def _decimals(values: Floats) -> int:
-    for decimals in range(MOST_DECIMALS):
-        scaled = values * 10.0**decimals
-        if np.all(np.abs(scaled - np.rint(scaled)) <= 1e-6 + 1e-15 * np.abs(scaled)):
-            return decimals
-    return MOST_DECIMALS
 
 
 CHECKS: Mapping[str, Callable[[Observed, Any, ScreeningContext], pd.DataFrame]] = {
@@ -671,6 +558,11 @@ CHECKS: Mapping[str, Callable[[Observed, Any, ScreeningContext], pd.DataFrame]] 
     "range": check_range,
     "status_mark": check_status_mark,
     "outside_period": check_outside_period,
+    "jump": check_jump,
+    "parts_total": check_parts_total,
+    "price_volume": check_price_volume,
+    "magnitude": check_magnitude,
+    "completeness": check_completeness,
 }
 
 

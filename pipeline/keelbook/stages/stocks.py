@@ -6,64 +6,15 @@ from typing import Any
 
 import numpy as np
 
-from keelbook.blocks import F8, Block, BlockKey, Choice, MethodSet
+from keelbook.blocks import Block, BlockKey, Choice, MethodSet
 from keelbook.lineage.derive import derive, given
-from keelbook.lineage.formula import Formula, Role, Setting
-from keelbook.lineage.lag import GeometricKernel, Kernel, Lag, TableKernel
-from keelbook.lineage.primitives import Each, Span, Spans
-from keelbook.methods.initial_stock import (
-    log_trend_coefficients,
-    opening_stock_geometric,
-    opening_stock_profile,
-)
-from keelbook.methods.weights import COHORT_GEOMETRIC, Weights, period_end_weights
+from keelbook.lineage.formula import Formula, Role
+from keelbook.lineage.primitives import Each
 from keelbook.stages.base import CHOSEN, Inputs, Result, Stage, keys, missing_input, note
 from keelbook.stages.deflation import by_edges, price_edges
+from keelbook.stages.starting_stock import FORMULAS as STARTING
+from keelbook.stages.starting_stock import LOSSES, STOCKS, Start, StartParams, defined, lag, read_for, start
 from keelbook.stages.totals import totals
-
-STOCKS = ("gross_stock", "productive_stock", "net_stock")
-LOSSES = {"consumption_of_fixed_capital": "net_stock", "retirements": "gross_stock"}
-"""Loss -> the stock that it is the loss of."""
-
-_WEIGHTS_OF = {
-    "gross_stock": "gross",
-    "productive_stock": "productive",
-    "net_stock": "net",
-    "consumption_of_fixed_capital": "consumption",
-    "retirements": "retirements",
-}
-
-
-def weights_of(choices: Mapping[str, Any], length: int) -> Weights:
-    """Return the period-end weights that one set of asset parameters describes."""
-    return period_end_weights(
-        efficiency=choices["asset.efficiency"],
-        retirement=choices.get("asset.retirement"),
-        life=choices.get("asset.life"),
-        rate=choices.get("asset.rate"),
-        b=choices.get("asset.b"),
-        discount_rate=choices.get("asset.discount_rate"),
-        timing=choices["capital.timing"],
-        gross_life=choices.get("asset.gross_life"),
-        length=length,
-    )
-
-
-def kernel(measure: str, choices: Mapping[str, Any], length: int) -> Kernel:
-    """Return the weights of one measure, as a recursion where the form has one."""
-    weights = weights_of(choices, max(length, 3))
-    own: F8 = getattr(weights, _WEIGHTS_OF[measure])
-    stock: F8 = getattr(weights, _WEIGHTS_OF[LOSSES.get(measure, measure)])
-    if choices["asset.efficiency"] == COHORT_GEOMETRIC and _WEIGHTS_OF[measure] not in (
-        "gross",
-        "retirements",
-    ):
-        return GeometricKernel(float(own[0]), float(own[1]), 1 - choices["asset.rate"], float(stock[0]))
-    return TableKernel(own, stock)
-
-
-def _lag(measure: str) -> Callable[[Setting], Lag]:
-    return lambda s: Lag(tuple(kernel(measure, c, len(s.periods)) for c in s.sets), s.which)
 
 
 def _cohort_formula(measure: str, symbol: str) -> Formula:
@@ -73,7 +24,7 @@ def _cohort_formula(measure: str, symbol: str) -> Formula:
         equation=f"{symbol}_t = sum_v w(v) I_(t-v) + remainder(t) x opening {stock}, weights w of the {measure}",
         citation="OECD, Measuring Capital (2009), perpetual inventory method",
         roles=(Role("investment"), Role("opening_stock"), Role("growth", counted=False)),
-        build=_lag(measure),
+        build=lag(measure),
         kind="series",
     )
 
@@ -86,91 +37,6 @@ VINTAGES = {
     "retirements": _cohort_formula("retirements", "R"),
 }
 
-
-def _trend(which: int, outer: Callable[[F8], F8]) -> Callable[[Setting], Span]:
-    """Return the builder of one coefficient of the log-linear trend over the first years of each series."""
-
-    def build(s: Setting) -> Span:
-        window = int(s.single("capital.trend_window"))
-        coefficients = log_trend_coefficients(window)[which]
-
-        def plan(x: F8) -> Spans:
-            there = np.isfinite(x)
-            start = np.argmax(there, axis=0)
-            first = np.full(x.shape, -1)
-            n = np.arange(x.shape[1])
-            usable = there.any(axis=0) & (start > 0) & (start + window <= len(x))
-            rows = np.minimum(start + np.arange(window)[:, None], len(x) - 1)
-            usable &= (x[rows, n] > 0).all(axis=0)
-            first[start[usable] - 1, n[usable]] = start[usable]
-            shape = (window, *x.shape)
-            return Spans(first, np.full(x.shape, window), np.broadcast_to(coefficients[:, None, None], shape))
-
-        return Span(plan, inner=np.log, outer=outer)
-
-    return build
-
-
-TREND_GROWTH = Formula(
-    name="log_trend_growth",
-    equation="g = exp(slope of ln I on t over the first years) - 1",
-    citation="Nehru and Dhareshwar 1993: log-linear trend of investment",
-    roles=(Role("investment"),),
-    build=_trend(0, np.expm1),
-    kind="series",
-    estimated=True,
-)
-
-TREND_INVESTMENT = Formula(
-    name="log_trend_start",
-    equation="I_1 = exp(fitted value of ln I in the first year)",
-    citation="Nehru and Dhareshwar 1993: the fitted first value",
-    roles=(Role("investment"),),
-    build=_trend(1, np.exp),
-    kind="series",
-    estimated=True,
-)
-
-
-def _steady_state(measure: str) -> Callable[[Setting], Each]:
-    def build(s: Setting) -> Each:
-        kernels = [kernel(measure, c, len(s.periods)) for c in s.sets]
-
-        def opening(investment: F8, growth: F8, which: F8) -> F8:
-            investment, growth, which = np.broadcast_arrays(investment, growth, which)
-            out = np.full(investment.shape, np.nan, np.result_type(investment, growth))
-            for i, k in enumerate(kernels):
-                mine = (which == i) & np.isfinite(investment) & np.isfinite(growth)
-                if not mine.any():
-                    continue
-                if isinstance(k, GeometricKernel):
-                    mine &= growth.real + (1 - k.keep) > 0
-                    rate = np.asarray(1 - k.keep)
-                    out[mine] = opening_stock_geometric(
-                        investment[mine], growth[mine], np.asarray(k.first), rate
-                    )
-                else:
-                    out[mine] = opening_stock_profile(investment[mine], growth[mine], k.stock)
-            return out
-
-        return Each(opening, (s.which.astype(np.float64),))
-
-    return build
-
-
-def _opening_formula(measure: str) -> Formula:
-    return Formula(
-        name=f"{measure}_steady_state",
-        equation="K_0 = I_1 sum_v w(v) (1+g)^-(v+1); geometric: w(0) I_1 / (g + d)",
-        citation="Harberger 1978 (formula from memory); Nehru and Dhareshwar 1993 for the fitted start",
-        roles=(Role("investment"), Role("growth", counted=False)),
-        build=_steady_state(measure),
-        estimated=True,
-        assumed=True,
-    )
-
-
-OPENING = {measure: _opening_formula(measure) for measure in STOCKS}
 
 AT_CURRENT_PRICES = Formula(
     name="at_current_prices",
@@ -188,13 +54,29 @@ AT_REPLACEMENT_COST = Formula(
     build=lambda s: Each(lambda volume, price: volume * price),
 )
 
+AT_REFERENCE_PRICES = Formula(
+    name="at_reference_prices",
+    equation="volume_t = year-end value_t / Pe_t",
+    citation="OECD, Measuring Capital (2009): balance-sheet value at year-end prices",
+    roles=(Role("year_end_value"), Role("year_end_price")),
+    build=lambda s: Each(lambda value, price: value / price),
+)
+
+AS_NET_STOCK = Formula(
+    name="productive_as_net_stock",
+    equation="productive stock = net stock, of an asset that does not wear out",
+    citation="OECD, Measuring Capital (2009): land and inventories have no depreciation",
+    roles=(Role("net_stock"),),
+    build=lambda s: Each(lambda net: net * 1.0),
+)
+
 FORMULAS = (
-    TREND_GROWTH,
-    TREND_INVESTMENT,
-    *OPENING.values(),
+    *STARTING,
     *VINTAGES.values(),
     AT_CURRENT_PRICES,
     AT_REPLACEMENT_COST,
+    AT_REFERENCE_PRICES,
+    AS_NET_STOCK,
 )
 
 BALANCE_TOLERANCE = 1e-11
@@ -208,88 +90,98 @@ class StocksParams:
     assets: Callable[[str, str], MethodSet | None]
     timing: Choice
     age_price_mode: Choice
-    initial_stock: Choice
-    trend_window: Choice
+    start: StartParams
     deflation_order: Choice
+
+
+DIMENSIONS = ("sector", "industry", "asset")
+"""Dimensions over which totals of stocks and losses are made."""
 
 
 def run(inputs: Inputs, params: StocksParams) -> Result:
     """Return the stocks and losses of every investment series with an asset rule, and their totals."""
+    blocks, benchmarks = _delivered(inputs, params)
     key = BlockKey("investment", CHOSEN, "constant")
     investment = inputs.get(key)
     if investment is None:
-        return Result((), [missing_input("stocks", key)])
+        return Result(blocks, [missing_input("stocks", key)])
     sets, which, findings = _choices(investment, params)
     covered = which >= 0
+    if not covered.any():
+        return Result(blocks, findings)
     investment, which = investment.take(covered), which[covered]
-    periods, series = investment.periods, investment.series
-    method = (params.initial_stock, params.trend_window)
-    start = {
-        measure: derive(
-            formula,
-            BlockKey(measure, "log_linear_trend", basis),
-            series,
-            periods,
-            {"investment": given(investment)},
-            sets=(method,),
-            part=False,
-        )
-        for measure, formula, basis in (
-            ("trend_growth", TREND_GROWTH, "_Z"),
-            ("trend_investment", TREND_INVESTMENT, "constant"),
-        )
-    }
-    growth = start["trend_growth"]
-    findings.extend(_no_start(investment, growth, sets, which))
-    blocks: list[Block] = list(start.values())
+    begin = start(investment, sets, which, benchmarks, params.start)
+    findings.extend(begin.findings)
+    blocks.extend(begin.blocks)
     made: dict[str, Block] = {}
     for measure in (*STOCKS, *LOSSES):
-        stock = LOSSES.get(measure, measure)
-        defined = _defined(measure, sets)[which]
-        mine = investment.take(defined)
-        if not len(mine.series):
-            continue
-        if measure in STOCKS:
-            made[f"{measure}/opening"] = derive(
-                OPENING[measure],
-                BlockKey(measure, "steady_state", "constant"),
+        there = defined(measure, sets)[which]
+        mine = investment.take(there)
+        if len(mine.series):
+            made[measure] = derive(
+                VINTAGES[measure],
+                BlockKey(measure, "perpetual_inventory", "constant"),
                 mine.series,
-                periods,
-                {"investment": given(start["trend_investment"]), "growth": given(growth)},
+                mine.periods,
+                {
+                    "investment": given(mine),
+                    "opening_stock": read_for(begin.openings[LOSSES.get(measure, measure)], mine.series),
+                    "growth": given(begin.growth),
+                },
                 sets=sets,
-                which=which[defined],
-                chosen=False,
-                part=False,
+                which=which[there],
+                part=mine.part,
             )
-        made[measure] = derive(
-            VINTAGES[measure],
-            BlockKey(measure, "perpetual_inventory", "constant"),
-            mine.series,
-            periods,
-            {
-                "investment": given(mine),
-                "opening_stock": given(made[f"{stock}/opening"]),
-                "growth": given(growth),
-            },
-            sets=sets,
-            which=which[defined],
-            part=mine.part,
-        )
-    findings.extend(_unbalanced(investment, made))
+    findings.extend(_unbalanced(investment, made, begin))
     findings.extend(_broken_off(investment, made["net_stock"]))
-    blocks.extend(made.values())
     valued, problems = _valued(inputs, made, params)
-    blocks.extend(valued)
     findings.extend(problems)
-    for block in [
-        investment_total for investment_total in (*made.values(), *valued) if _has_totals(investment_total)
-    ]:
-        blocks.extend(totals(block, ("industry", "asset")))
+    for block in (*made.values(), *valued):
+        blocks.append(block)
+        blocks.extend(totals(block, DIMENSIONS))
     return Result(blocks, findings)
 
 
-def _has_totals(block: Block) -> bool:
-    return bool(block.part.any())
+def _delivered(inputs: Inputs, params: StocksParams) -> tuple[list[Block], dict[str, Block]]:
+    """Return what follows from delivered stocks, and the delivered stocks at reference-year prices by measure.
+
+    A stock delivered at year-end prices is put at reference-year prices; a net stock that no investment builds
+    (land, inventories) is a productive stock as well.
+    """
+    year_end_prices = inputs.get(BlockKey("investment_price", "year_end", "year_end"))
+    blocks, at_reference = [], {}
+    for measure in STOCKS:
+        block = inputs.get(BlockKey(measure, "delivered", "constant"))
+        valued = inputs.get(BlockKey(measure, "delivered", "year_end"))
+        if block is None and valued is not None and year_end_prices is not None:
+            edges = price_edges(valued.series, year_end_prices, params.deflation_order.value)
+            block = derive(
+                AT_REFERENCE_PRICES,
+                BlockKey(measure, "at_reference_prices", "constant"),
+                valued.series,
+                valued.periods,
+                {"year_end_value": given(valued), "year_end_price": by_edges(year_end_prices, edges)},
+                sets=((params.deflation_order,),),
+                chosen=valued.chosen,
+                part=valued.part,
+            )
+            blocks.append(block)
+        if block is not None:
+            at_reference[measure] = block
+    net = at_reference.get("net_stock")
+    if net is not None and net.chosen.any():
+        alone = net.take(net.chosen)
+        blocks.append(
+            derive(
+                AS_NET_STOCK,
+                BlockKey("productive_stock", "as_net_stock", "constant"),
+                alone.series,
+                alone.periods,
+                {"net_stock": given(alone)},
+                part=alone.part,
+            )
+        )
+    return blocks, at_reference
 
 
 def _choices(
@@ -324,50 +216,6 @@ def _choices(
     return tuple(sets), of_pair[pair.ravel()], findings
 
 
-def _defined(measure: str, sets: tuple[MethodSet, ...]) -> Any:
-    """Return for each parameter set whether the measure exists: a cohort rate has a gross stock only with a life."""
-    return np.array([_set_defines(measure, {c.name: c.value for c in s}) for s in sets], bool)
-
-
-def _set_defines(measure: str, choices: Mapping[str, Any]) -> bool:
-    return getattr(weights_of(choices, 3), _WEIGHTS_OF[measure]) is not None
-
-
-def _no_start(
-    investment: Block, growth: Block, sets: tuple[MethodSet, ...], which: Any
-) -> list[dict[str, Any]]:
-    """Return findings for series whose steady-state start cannot be made."""
-    out = []
-    rate = np.array([_geometric_rate({c.name: c.value for c in s}) for s in sets])
-    g = np.where(np.isfinite(growth.value), growth.value, 0).sum(axis=0)
-    lost = ~growth.held
-    never = ~lost & (g + rate[which] <= 0)
-    for n in np.flatnonzero((lost | never) & investment.held):
-        why = (
-            "the trend window has fewer years than declared, or investment that is not above zero"
-            if lost[n]
-            else f"trend growth {g[n]:.4f} plus the rate {rate[which[n]]:.4f} is not above zero"
-        )
-        out.append(
-            note(
-                "no_starting_stock",
-                "warn",
-                f"no steady-state start: {why}; the stocks are not computed",
-                investment.series.table,
-                int(investment.series.key[n]),
-                measure="net_stock",
-                time_period=str(investment.periods[int(np.argmax(np.isfinite(investment.value[:, n])))]),
-                expected="investment above zero in every year of the window, and growth + rate above zero",
-                remedy="choose another capital.trend_window, or deliver a stock",
-            )
-        )
-    return out
-
-
-def _geometric_rate(choices: Mapping[str, Any]) -> float:
-    return float(choices["asset.rate"]) if choices["asset.efficiency"] == COHORT_GEOMETRIC else np.inf
-
-
 def _broken_off(investment: Block, net: Block) -> list[dict[str, Any]]:
     """Return a finding per series that has investment after a year without: its stocks end at the gap."""
     after = np.isfinite(investment.value) & np.isnan(net.value)
@@ -392,15 +240,16 @@ def _broken_off(investment: Block, net: Block) -> list[dict[str, Any]]:
     return out
 
 
-def _unbalanced(investment: Block, made: Mapping[str, Block]) -> list[dict[str, Any]]:
+def _unbalanced(investment: Block, made: Mapping[str, Block], begin: Start) -> list[dict[str, Any]]:
     """Test W_t = W_(t-1) + I_t - CFC_t and G_t = G_(t-1) + I_t - R_t; both sides come from vintages."""
     out = []
     for loss, stock in LOSSES.items():
         if loss not in made:
             continue
-        closing, lost, opening = made[stock], made[loss], made[f"{stock}/opening"]
+        closing, lost = made[stock], made[loss]
+        opening = begin.opening_values(stock, closing.series)
         flow = investment.value[:, investment.series.locate(closing.series.key)]
-        before = np.where(np.isfinite(opening.value), opening.value, closing.value)[:-1]
+        before = np.where(np.isfinite(opening), opening, closing.value)[:-1]
         gap = closing.value[1:] - (before + flow[1:] - lost.value[1:])
         size = np.abs(closing.value[1:]) + np.abs(before) + np.abs(flow[1:]) + np.abs(lost.value[1:])
         with np.errstate(invalid="ignore"):
@@ -461,8 +310,16 @@ def _valued(
 STAGE = Stage(
     name="stocks",
     needs=frozenset(),
-    optional=keys("investment/*/constant", "investment_price/*/index", "investment_price/year_end/year_end"),
+    optional=keys(
+        "investment/*/constant",
+        "investment_price/*/index",
+        "investment_price/year_end/year_end",
+        *(f"{m}/delivered/{basis}" for m in STOCKS for basis in ("constant", "year_end")),
+    ),
     gives=keys(
+        "productive_stock/as_net_stock/constant",
+        "benchmark_factor/benchmark/_Z",
+        *(f"{m}/{method}/constant" for m in STOCKS for method in ("benchmark", "at_reference_prices")),
         "trend_growth/log_linear_trend/_Z",
         "trend_investment/log_linear_trend/constant",
         *(f"{m}/steady_state/constant" for m in STOCKS),

@@ -3,7 +3,15 @@
 import numpy as np
 import pytest
 
-from keelbook.methods import growth, income_shares, index_numbers, initial_stock, user_cost, valuation
+from keelbook.methods import (
+    benchmark,
+    growth,
+    income_shares,
+    index_numbers,
+    initial_stock,
+    user_cost,
+    valuation,
+)
 
 WEIGHTS = np.array([0.9, 0.5, 0.1, 0.0])
 FUNCTIONS = {
@@ -19,6 +27,18 @@ FUNCTIONS = {
     "endogenous_rate": (user_cost.endogenous_rate, 4),
     "capital_cost": (user_cost.capital_cost, 4),
     "unit_user_cost": (user_cost.unit_user_cost, 2),
+    "capital_cost_with_taxes": (user_cost.capital_cost, 6),
+    "opening_base": (user_cost.opening_base, 2),
+    "opening_depreciation": (user_cost.opening_depreciation, 4),
+    "opening_revaluation": (user_cost.opening_revaluation, 3),
+    "smoothed_log_change": (lambda p, q: user_cost.smoothed_log_change(p, q, 3), 2),
+    "revaluation_at": (user_cost.revaluation_at, 2),
+    "general_inflation": (user_cost.general_inflation, 4),
+    "exogenous_rate": (user_cost.exogenous_rate, 2),
+    "tax_term": (user_cost.tax_term, 3),
+    "benchmark_factor": (benchmark.benchmark_factor, 3),
+    "missing_part": (initial_stock.missing_part, 2),
+    "backcast_by_indicator": (lambda i, x, y: initial_stock.backcast_by_indicator(i, x, y)[-1], 3),
     "laspeyres": (index_numbers.laspeyres, 4),
     "paasche": (index_numbers.paasche, 4),
     "fisher": (index_numbers.fisher, 4),
@@ -28,6 +48,11 @@ FUNCTIONS = {
     "unadjusted": (income_shares.unadjusted, 1),
     "by_hours": (income_shares.by_hours, 4),
     "fixed_fraction": (income_shares.fixed_fraction, 3),
+    "by_persons": (income_shares.by_persons, 4),
+    "all_mixed": (income_shares.all_mixed, 2),
+    "proportional": (lambda d1, mixed, base: income_shares.proportional(d1, mixed, 1 + base), 3),
+    "asset_basis": (income_shares.asset_basis, 4),
+    "reconciled": (income_shares.reconciled, 4),
     "share": (income_shares.share, 2),
     "capital_share": (income_shares.capital_share, 1),
     "two_period_mean": (income_shares.two_period_mean, 2),

@@ -5,7 +5,9 @@ from keelbook.methods.growth import (
     discrete_residual,
     log_log_fit,
     log_residual,
+    period_means,
     readings,
+    reallocation,
     residual_level,
     split_of_rise,
 )
@@ -68,3 +70,28 @@ def test_split_refuses(changes, message):
     given = {"q0": 1.0, "q1": 2.0, "k0": 1.0, "k1": 1.5, "residual_level": 1.8, "capital_share": 0.3}
     with pytest.raises(ValueError, match=message):
         split_of_rise(**(given | changes))
+
+
+def test_reallocation_by_hand():
+    """Two industries without change of their own; labour moves from the one with the low labour share."""
+    found = reallocation(
+        value_share=np.array([0.5, 0.5]),
+        industry_growth=(np.array([-0.02, 0.06]), np.array([0.0, 0.0]), np.array([-0.1, 0.1])),
+        industry_capital_share=np.array([0.8, 0.4]),
+        total_growth=(np.array(0.03), np.array(0.0), np.array(0.0)),
+        capital_share=np.array(0.6),
+    )
+    np.testing.assert_allclose(found.within, 0, atol=1e-15)
+    assert found.output == pytest.approx(0.03 - 0.02)
+    assert found.capital == 0
+    assert found.labour == pytest.approx(0.5 * 0.2 * -0.1 + 0.5 * 0.6 * 0.1)
+    assert found.total() == pytest.approx(0.03)
+
+
+def test_means_of_spans_of_periods():
+    growth = np.array([[0.01, 0.01], [0.03, np.nan], [0.05, 0.05]])
+    np.testing.assert_allclose(
+        period_means(growth, [(0, 1), (2, 2), (0, 2)]), [[0.02, np.nan], [0.05, 0.05], [0.03, np.nan]]
+    )
+    with pytest.raises(ValueError, match=r"rows 0 to 2: \(1, 3\), \(2, 1\)"):
+        period_means(growth, [(0, 1), (1, 3), (2, 1)])

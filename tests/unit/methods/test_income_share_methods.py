@@ -3,10 +3,17 @@ import pytest
 
 from keelbook.methods.income_shares import (
     LABOUR_INCOME,
+    all_mixed,
+    asset_basis,
     by_hours,
+    by_persons,
     capital_share,
     factor_cost,
     fixed_fraction,
+    imputed_labour,
+    proportional,
+    reconciled,
+    reconciliation_factor,
     share,
     two_period_mean,
     unadjusted,
@@ -43,9 +50,33 @@ def test_shares_are_not_cut_and_keep_gaps():
     assert capital_share(np.array(0.65)) == pytest.approx(0.35)
 
 
-def test_names_of_the_adjustments():
-    assert dict(LABOUR_INCOME) == {
-        "unadjusted": unadjusted,
-        "hours": by_hours,
-        "fixed_fraction": fixed_fraction,
-    }
+def test_further_adjustments_by_hand():
+    base = np.array(100.0)
+    assert by_persons(D1, np.array(100.0), np.array(20.0), np.array(0.5)) == pytest.approx(66)
+    assert all_mixed(D1, MIXED) == pytest.approx(80)
+    assert share(proportional(D1, MIXED, base), base) == pytest.approx(60 / 80)
+    # A return of 10 % on assets of 50 is no labour income.
+    assert asset_basis(D1, MIXED, np.array(0.1), np.array(50.0)) == pytest.approx(75)
+
+
+def test_reconciled_scales_labour_and_capital_alike():
+    labour = imputed_labour(D1, np.array(100.0), np.array(40.0), np.array(1.0))
+    capital = np.array(8.0)
+    factor = reconciliation_factor(MIXED, labour, capital)
+    assert factor == pytest.approx(20 / 32)
+    assert reconciled(D1, MIXED, labour, capital) == pytest.approx(60 + 15)
+    assert factor * (labour + capital) == pytest.approx(MIXED)
+
+
+def test_every_adjustment_has_a_name():
+    assert sorted(LABOUR_INCOME) == [
+        "all_mixed",
+        "asset_basis",
+        "fixed_fraction",
+        "hours",
+        "persons",
+        "proportional",
+        "reconciled",
+        "unadjusted",
+    ]
+    assert len(set(LABOUR_INCOME.values())) == len(LABOUR_INCOME)

@@ -2,9 +2,11 @@ import numpy as np
 import pytest
 
 from keelbook.methods.initial_stock import (
+    backcast_by_indicator,
     half_life,
     half_life_of_part,
     log_trend_coefficients,
+    missing_part,
     opening_remainder,
     opening_stock_geometric,
     opening_stock_profile,
@@ -72,3 +74,17 @@ def test_no_half_life(rate, growth):
 
 def test_half_life_of_a_stock_that_halves_every_period():
     assert half_life(0.5) == pytest.approx(1)
+
+
+def test_investment_before_the_first_year_follows_the_indicator():
+    investment = np.array([[30.0, 3], [50, 5]])
+    indicator, linked = np.array([[1.0], [2.0]]), np.array([[3.0], [5.0]])
+    np.testing.assert_allclose(backcast_by_indicator(investment, indicator, linked), [[10, 1], [20, 2]])
+    with pytest.raises(ValueError, match="2 periods of investment and 1"):
+        backcast_by_indicator(investment, indicator, linked[:1])
+    with pytest.raises(ValueError, match="0 or less"):
+        backcast_by_indicator(investment, indicator, np.array([[3.0], [-3.0]]))
+
+
+def test_what_a_stock_started_from_zero_lacks():
+    np.testing.assert_allclose(missing_part(np.array([100.0, 50, 0]), np.array([0.0, 150, 20])), [1, 0.25, 0])

@@ -66,3 +66,33 @@ def test_opposite_infinities_are_refused_too():
 def test_a_gap_in_the_opening_stock_is_refused():
     with pytest.raises(ValueError, match="opening stock"):
         geometric_stock(np.ones((3, 1)), np.ones(1), np.full(1, 0.5), np.array([np.nan]))
+
+
+def test_rates_may_differ_from_period_to_period():
+    keep = np.array([[0.5], [0.8], [0.0]])
+    stock = geometric_stock(np.array([[100.0], [10], [1]]), (1 + keep) / 2, keep, np.array([40.0]))
+    np.testing.assert_allclose(stock[:, 0], [20 + 75, 76 + 9, 0.5], rtol=1e-15)
+
+
+def test_stocks_are_written_where_asked():
+    investment = np.arange(12.0).reshape(4, 3)
+    weights = np.array([[1.0, 0.5, 0], [0.9, 0.2, 0]])
+    for function, rest, shape in (
+        (geometric_stock, (0.9, 0.8, np.ones(3)), (4, 3)),
+        (cohort_stock, (weights[0],), (4, 3)),
+        (cohort_stocks, (weights,), (2, 4, 3)),
+    ):
+        out = np.full(shape, np.nan)
+        found = function(investment, *rest, out=out)
+        assert np.shares_memory(found, out)
+        np.testing.assert_array_equal(out, function(investment, *rest))
+
+
+def test_a_stock_is_never_written_over_its_investment():
+    investment = np.ones((4, 3))
+    with pytest.raises(ValueError, match="over its own investment"):
+        geometric_stock(investment, 0.9, 0.8, None, out=investment)
+    with pytest.raises(ValueError, match="apart from the investment"):
+        cohort_stock(investment, np.array([1.0, 0]), out=investment)
+    with pytest.raises(ValueError, match=r"expected \(1, 4, 3\)"):
+        cohort_stock(investment, np.array([1.0, 0]), out=np.ones((3, 3)))

@@ -1,7 +1,12 @@
 import numpy as np
 import pytest
 
-from keelbook.methods.profiles import age_price, efficiency, efficiency_from_age_price
+from keelbook.methods.profiles import (
+    age_price,
+    direct_age_price,
+    efficiency,
+    efficiency_from_age_price,
+)
 
 AGES = np.array([0.0, 0.5, 3.5, 4.0, 9.0])
 
@@ -67,3 +72,35 @@ def test_prices_that_do_not_fit_the_rate_show_in_the_efficiency():
     np.testing.assert_allclose(rising, [1, 9, 0], rtol=1e-12)
     with pytest.raises(ValueError, match="age-price profile"):
         efficiency_from_age_price(np.array([1.0, 1.2, 0.0]), 0.0)
+
+
+@pytest.mark.parametrize(
+    ("form", "parameters", "expected"),
+    [
+        ("straight_line", {}, [1, 0.875, 0.125, 0, 0]),
+        ("declining_balance", {"factor": 2}, [1, 0.5**0.5, 0.5**3.5, 0, 0]),
+        ("declining_balance", {"factor": 5}, [1, 0, 0, 0, 0]),
+    ],
+)
+def test_prices_given_directly(form, parameters, expected):
+    np.testing.assert_allclose(direct_age_price(form, AGES, life=4, **parameters), expected, rtol=1e-15)
+
+
+@pytest.mark.parametrize(
+    ("form", "parameters", "message"),
+    [
+        ("straight", {"life": 4}, "expected one of straight_line, declining_balance"),
+        ("straight_line", {"life": 4, "factor": 2}, "straight_line price does not use factor"),
+        ("declining_balance", {"life": 4}, "declining-balance factor is needed"),
+        ("declining_balance", {"life": 4, "factor": 0}, "factor is 0"),
+        ("declining_balance", {"life": 0, "factor": 2}, "life is 0"),
+    ],
+)
+def test_prices_refused(form, parameters, message):
+    with pytest.raises(ValueError, match=message):
+        direct_age_price(form, AGES, **parameters)
+
+
+def test_straight_line_prices_without_discounting_come_from_constant_efficiency():
+    z = direct_age_price("straight_line", np.arange(6.0), life=5)
+    np.testing.assert_allclose(efficiency_from_age_price(z, 0.0), [1, 1, 1, 1, 1, 0], atol=1e-15)

@@ -1,21 +1,19 @@
 import numpy as np
 import pytest
-from small_blocks import block, choice, column, get, holds, index, number, rules_of, run_stage
+from small_blocks import block, column, get, holds, index, number, params, rules_of, run_stage
 
 from keelbook.blocks import ESTIMATED, NORMAL
 from keelbook.stages import deflation
-from keelbook.stages.deflation import SPECIFICITY, DeflationParams, price_edges
+from keelbook.stages.deflation import SPECIFICITY, price_edges
 
 NAN = np.nan
 ORDER = ("industry_asset", "asset", "industry", "total")
-PARAMS = DeflationParams(choice("deflation.order", ORDER))
-
 CURRENT = "investment/delivered/current"
 PRICE = "investment_price/rebased/index"
 
 
 def _deflated(*blocks, order=ORDER):
-    return run_stage(deflation.STAGE, DeflationParams(choice("deflation.order", order)), *blocks)
+    return run_stage(deflation.STAGE, params("deflation", order=order), *blocks)
 
 
 def test_a_volume_is_the_value_divided_by_the_price():
@@ -132,13 +130,12 @@ def test_what_is_not_there_is_told(there, missing):
     assert findings[0]["message"] == f"deflation: not computed, there is no {missing}"
 
 
-def test_parts_stay_parts():
+def test_a_group_beside_its_assets_is_not_deflated():
     current = block(CURRENT, {"industry=A asset=N112": [1.0], "industry=A asset=N11": [1.0]})
     current.part[current.series.is_code("asset", "N11")] = False
-    book, _ = _deflated(current, block(PRICE, {"asset=N112": [1.0], "asset=N11": [1.0]}))
+    book, findings = _deflated(current, block(PRICE, {"asset=N112": [2.0], "asset=N11": [2.0]}))
     volume = get(book, "investment/deflated/constant")
-    assert column(volume, "industry=A asset=N112")[0] == 1
-    assert dict(zip(volume.series.key.tolist(), volume.part.tolist(), strict=True)) == {
-        number("industry=A asset=N112"): True,
-        number("industry=A asset=N11"): False,
-    }
+    assert column(volume, "industry=A asset=N112")[0] == 0.5
+    assert volume.part.all()
+    assert not holds(volume, "industry=A asset=N11")
+    assert not findings

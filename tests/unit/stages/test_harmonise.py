@@ -1,31 +1,19 @@
 import numpy as np
 import pandas as pd
 import pytest
-from small_blocks import PARENTS, TABLE, codes, column, get, holds, rules_of
+from small_blocks import TABLE, codes, column, get, holds, params, rules_of
 
 from keelbook.blocks import DIMS, NO_FIGURE, NORMAL, PROVISIONAL
+from keelbook.contracts.codes import load_code_lists
 from keelbook.contracts.measures import load_measures
 from keelbook.stages.base import Book
-from keelbook.stages.harmonise import HarmoniseParams, SourcePlace, harmonise, observed_blocks
+from keelbook.stages.harmonise import harmonise, observed_blocks
 
 YEARS = range(2010, 2013)
-REFERENCE = 2011
-IMPUTED, ASSUMED, MISSING = 6, 4, 9
-"""Positions in the list of observation statuses that the leaf map of these tests names."""
+LISTS = load_code_lists()
+IMPUTED, BREAK, MISSING = (LISTS.position("obs_status", code) for code in "IBO")
 
-PARAMS = HarmoniseParams(
-    measures=load_measures(),
-    measures_file="schemas/measures.toml",
-    measure_lines={},
-    reference_year=REFERENCE,
-    asset_parents=PARENTS,
-    imputed=frozenset({IMPUTED}),
-    assumed=frozenset({ASSUMED}),
-    sources={
-        "yearly": SourcePlace("assembly.toml", 10, False),
-        "rates": SourcePlace("assembly.toml", 20, True),
-    },
-)
+PARAMS = params("harmonise")
 
 
 def _rows(
@@ -65,7 +53,7 @@ def _harmonised(*series: list[dict]) -> tuple[Book, list[dict]]:
 
 
 def test_observations_are_scattered_to_their_period_and_series():
-    rows = _rows("investment", "industry=C asset=N112", [1.0, 2, 3], status=[0, IMPUTED, ASSUMED])
+    rows = _rows("investment", "industry=C asset=N112", [1.0, 2, 3], status=[BREAK, IMPUTED, 0])
     later = _rows("investment", "industry=A asset=N112", [9.0], first=2012, conf=[2])
     (item,) = observed_blocks(_observations(rows, later), TABLE, YEARS, PARAMS)
     np.testing.assert_array_equal(item.block.value, [[np.nan, 1], [np.nan, 2], [9, 3]])
@@ -74,7 +62,7 @@ def test_observations_are_scattered_to_their_period_and_series():
     )
     np.testing.assert_array_equal(column(item.block, "industry=A asset=N112", "conf"), [0, 0, 2])
     np.testing.assert_array_equal(column(item.block, "industry=C asset=N112", "imputed"), [0, 1, 0])
-    np.testing.assert_array_equal(column(item.block, "industry=C asset=N112", "assumed"), [0, 0, 1])
+    assert item.block.assumed is None
     assert item.block.series.key[item.column[0]] > item.block.series.key[item.column[3]]
 
 
@@ -210,7 +198,6 @@ def test_an_index_is_brought_to_the_reference_year():
     np.testing.assert_allclose(column(out, "asset=N112"), [0.8, 1, 1.2], rtol=1e-15)
     np.testing.assert_allclose(column(out, "asset=N113"), [0.5, 1, 2.5], rtol=1e-15)
     assert out.chosen.all()
-    assert not get(book, "investment_price/delivered/source_index").chosen.any()
     assert not findings
 
 
@@ -276,19 +263,19 @@ def test_a_delivered_total_is_kept_and_not_made_again():
     np.testing.assert_array_equal(column(delivered, "industry=A worker_group=_T"), [5, 5, 5])
     made = get(book, "hours_worked/sum_of_parts/_Z")
     assert not holds(made, "industry=A worker_group=_T")
-    np.testing.assert_array_equal(column(made, "industry=_T worker_group=SAL"), [1, 1, 1])
+    np.testing.assert_array_equal(column(made, "industry=_T worker_group=_T"), [5, 5, 5])
     chosen = get(book, "hours_worked/*/_Z")
     np.testing.assert_array_equal(column(chosen, "industry=A worker_group=_T"), [5, 5, 5])
 
 
-def test_sectors_and_areas_are_not_added_up():
+def test_sectors_are_parts_of_the_economy_and_areas_are_not_added_up():
     book, _ = _harmonised(
-        _rows("investment", "industry=A asset=N112", [1.0, 1, 1]),
+        _rows("investment", "sector=S11 industry=A asset=N112", [1.0, 1, 1]),
         _rows("investment", "sector=S13 industry=A asset=N112", [4.0, 4, 4]),
         _rows("investment", "area=XB industry=A asset=N112", [9.0, 9, 9]),
     )
     total = get(book, "investment/sum_of_parts/current")
-    np.testing.assert_array_equal(column(total, "industry=_T asset=N112"), [1, 1, 1])
+    np.testing.assert_array_equal(column(total, "sector=S1 industry=A asset=N112"), [5, 5, 5])
     np.testing.assert_array_equal(column(total, "sector=S13 industry=_T asset=N112"), [4, 4, 4])
     np.testing.assert_array_equal(column(total, "area=XB industry=_T asset=_T"), [9, 9, 9])
 

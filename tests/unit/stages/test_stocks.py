@@ -1,10 +1,9 @@
 import numpy as np
 import pytest
-from small_blocks import block, choice, column, get, holds, rules_of, run_stage
+from small_blocks import block, choice, column, get, holds, params, rules_of, run_stage
 
 from keelbook.blocks import ESTIMATED
 from keelbook.stages import stocks
-from keelbook.stages.stocks import StocksParams
 
 NAN = np.nan
 FLOW = "investment/deflated/constant"
@@ -19,22 +18,20 @@ HYPERBOLIC = {
 }  # fmt: skip
 
 
-def _params(rules: dict, timing: str = "mid", window: int = 2) -> StocksParams:
+def _params(rules: dict, timing: str = "mid", window: int = 2):
     """rules: asset -> its parameters, for every industry; or (asset, industry) -> them."""
 
     def of(asset: str, industry: str):
         found = rules.get((asset, industry), rules.get(asset))
         return None if found is None else tuple(choice(f"asset.{k}", v) for k, v in found.items())
 
-    return StocksParams(
-        of,
-        choice("capital.timing", timing),
-        choice("capital.trend_window", window),
-        choice("deflation.order", ("industry_asset", "asset", "industry", "total")),
-    )
+    return params("stocks", assets=of, timing=timing, trend_window=window)
 
 
 def _stocks(rules: dict, rows: dict, *more, timing: str = "mid", window: int = 2):
+    if not more:
+        ones = [1.0] * len(next(iter(rows.values())))
+        more = (block(PRICE, {"asset=_T": ones}), block(YEAR_END, {"asset=_T": ones}))
     return run_stage(stocks.STAGE, _params(rules, timing, window), block(FLOW, rows), *more)
 
 
@@ -196,11 +193,11 @@ def test_parameters_may_differ_by_industry():
     np.testing.assert_allclose(column(opening, "industry=A asset=N112")[0], 1000, rtol=1e-12)
     np.testing.assert_allclose(column(opening, "industry=C asset=N112")[0], 500, rtol=1e-12)
     net = get(book, STOCK.format("net_stock"))
-    rates = {
-        int(k): {c.name: c.value for c in net.origin.sets[s]}["asset.rate"]
-        for k, s in zip(net.series.key, net.origin.set, strict=True)
-    }
-    assert sorted(rates.values()) == [0.07, 0.17]
+    rates = [
+        {c.name: c.value for c in net.origin.sets[net.origin.set[n]]}["asset.rate"]
+        for n in np.flatnonzero(net.part)
+    ]
+    assert rates == [0.07, 0.17]
 
 
 def test_an_asset_without_a_rule_is_told_and_left_out():
@@ -247,9 +244,10 @@ def test_values_at_current_prices_and_at_replacement_cost():
 
 
 def test_without_prices_there_are_volumes_only_and_it_is_told():
-    book, findings = _stocks({"N112": GEOMETRIC}, {"asset=N112": _growing(100, 0.03, 3)})
+    flow = block(FLOW, {"asset=N112": _growing(100, 0.03, 3)})
+    book, findings = run_stage(stocks.STAGE, _params({"N112": GEOMETRIC}), flow)
     assert {b.key.price_basis for b in book} == {"constant", "_Z"}
-    assert rules_of(findings) == [] or rules_of(findings) == ["not_computed"]
+    assert rules_of(findings) == ["not_computed"]
 
 
 def test_the_assumed_part_of_a_stock_is_what_is_left_of_its_start():
@@ -286,3 +284,9 @@ def test_without_investment_nothing_is_computed_and_it_is_told():
     book, findings = run_stage(stocks.STAGE, _params({}))
     assert list(book) == []
     assert rules_of(findings) == ["not_computed"]
+
+
+def test_without_any_asset_rule_nothing_is_computed_and_it_is_told():
+    book, findings = _stocks({}, {"asset=N112": _growing(1, 0, 4)})
+    assert rules_of(findings) == ["no_asset_rule"]
+    assert list(book) == []
