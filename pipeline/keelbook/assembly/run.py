@@ -18,7 +18,6 @@ from keelbook.assembly import plan
 from keelbook.assembly.declaration import Assembly, load_assembly
 from keelbook.assembly.identity import Identity, identify
 from keelbook.blocks import SeriesIndex
-from keelbook.contracts.codes import CodeLists
 from keelbook.contracts.measures import load_measures
 from keelbook.contracts.parameters import load_parameters
 from keelbook.contracts.screening_rules import load_screening_rules
@@ -34,6 +33,7 @@ from keelbook.stages.intake import Intake, source_paths, take_in
 from keelbook.stages.screening import screen
 from keelbook.stages.screening_report import ScreeningContext
 from keelbook.store import generations
+from keelbook.store.append import append
 from keelbook.store.connect import open_new
 from keelbook.store.writer import Writer
 
@@ -113,7 +113,7 @@ def assemble(
             evidence.execute(tables[name].create_sql())
         try:
             taken = take_in(evidence, assembly, assembly.lists, load_measures(), progress=log.step)
-            _insert(evidence, tables["correction"], taken.corrections)
+            append(evidence, tables["correction"], taken.corrections)
             found = [taken.findings, _screened(evidence, assembly, taken)]
             log.step("screened", findings=len(found[0]) + len(found[1]))
             # What the acceptances of later findings are about is not known yet.
@@ -130,7 +130,8 @@ def assemble(
                 {"stage": "str", "note": "str"}
             )
             writer.insert("stage_run", stage_rows)
-            writer.insert("finding", _numbered(everything))
+            writer.insert("finding", _numbered(writer.withheld(everything)))
+            append(evidence, tables["finding"], _numbered(everything), assembly.lists)
             writer.insert("build", _build_row(assembly, identity))
             writer.finish()
             panel_file.close()
@@ -302,17 +303,8 @@ def _write_observations(
             }
         )
         for name, frame in (("observation_series", pd.DataFrame(series)), ("observation", rows)):
-            _insert(evidence, tables[name], frame, assembly.lists)
+            append(evidence, tables[name], frame, assembly.lists)
         first += n
-
-
-def _insert(
-    con: duckdb.DuckDBPyConnection, table: Table, frame: pd.DataFrame, lists: CodeLists | None = None
-) -> None:
-    table.validate(frame, lists)
-    con.register("_frame", frame)
-    con.execute(f'insert into "{table.table}" by name select * from _frame')
-    con.unregister("_frame")
 
 
 def _refused(found: pd.DataFrame, strict: bool) -> pd.DataFrame:
@@ -337,7 +329,7 @@ def _stop_if_refused(
 ) -> None:
     if not len(_refused(found, strict)):
         return
-    _insert(evidence, tables["finding"], _numbered(found))
+    append(evidence, tables["finding"], _numbered(found))
     evidence.close()
     log.say("refused", findings=len(found))
     (work / generations.LOG).write_text("\n".join(log.lines) + "\n", encoding="utf-8")

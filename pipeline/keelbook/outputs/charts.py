@@ -190,10 +190,7 @@ def bar_chart(
         points = [(plot.x(i), plot.y(v)) for i, v in run]
         path = "M" + "L".join(f"{x:.1f} {y:.1f}" for x, y in points)
         out.append(f'<path d="{path}" fill="none" stroke="{line.colour}" stroke-width="1.8"/>')
-        out += [
-            f'<circle cx="{x:.1f}" cy="{y:.1f}" r="{2.4 if size.names else 1.5}" fill="#fff" stroke="{line.colour}" stroke-width="1.4"/>'
-            for x, y in points
-        ]
+        out += [_ring(x, y, 2.4 if size.names else 1.5, line.colour) for x, y in points]
     end = _last(line.values)
     if end is not None:
         labels.append((line, plot.x(end[0]) + width / 2, plot.y(end[1])))
@@ -235,9 +232,7 @@ def row_chart(
         total = sums.values[i]
         if total is not None:
             middle = y + height / 2
-            out.append(
-                f'<circle cx="{x(total):.1f}" cy="{middle:.1f}" r="4" fill="#fff" stroke="{INK}" stroke-width="1.6"/>'
-            )
+            out.append(_ring(x(total), middle, 4, INK))
             out.append(_words(size.width, middle + 4, _signed(total), "end", "n b"))
     return _svg(text, size.width, bottom + BOTTOM, out)
 
@@ -339,6 +334,12 @@ def _words(x: float, y: float, words: str, anchor: Literal["start", "middle", "e
 
 def _line(x0: float, y0: float, x1: float, y1: float, colour: str) -> str:
     return f'<line x1="{x0:.1f}" y1="{y0:.1f}" x2="{x1:.1f}" y2="{y1:.1f}" stroke="{colour}"/>'
+
+
+def _ring(x: float, y: float, radius: float, colour: str) -> str:
+    return (
+        f'<circle cx="{x:.1f}" cy="{y:.1f}" r="{radius}" fill="#fff" stroke="{colour}" stroke-width="1.5"/>'
+    )
 
 
 def _svg(text: Text, width: float, height: float, parts: Sequence[str]) -> Markup:

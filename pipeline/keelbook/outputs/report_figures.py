@@ -2,7 +2,7 @@
 
 import math
 from collections.abc import Callable, Sequence
-from dataclasses import dataclass, field, replace
+from dataclasses import dataclass, replace
 from statistics import fmean
 from typing import TypeVar
 
@@ -22,6 +22,25 @@ from keelbook.outputs.charts import (
     Value,
 )
 from keelbook.outputs.published import Panel, Published
+from keelbook.outputs.report_parts import (
+    Brief,
+    Cell,
+    Chart,
+    Figure,
+    Section,
+    Small,
+    Table,
+    asset_name,
+    level,
+    money,
+    named,
+    percent,
+    scaled,
+    short,
+    unit_words,
+    written,
+    yearly_table,
+)
 
 PANELS = 40
 """Small charts drawn of one kind; the rest are counted."""
@@ -34,67 +53,6 @@ CONTRIBUTIONS = (
 OUTPUT = "output_growth"
 
 T = TypeVar("T")
-
-
-@dataclass(frozen=True)
-class Cell:
-    """A figure of a table: as in the panel, as written, and its status if it is not a normal value."""
-
-    value: Value
-    written: str
-    status: str = ""
-
-
-@dataclass(frozen=True)
-class Table:
-    """Figures in the unit of the caption, a row a year (or an industry)."""
-
-    caption: str
-    corner: str
-    head: Sequence[str]
-    rows: Sequence[tuple[str, Sequence[Cell]]]
-
-
-@dataclass(frozen=True)
-class Chart:
-    """One chart, drawn for wide and for narrow pages."""
-
-    wide: Markup
-    narrow: Markup
-    title: str = ""
-
-
-@dataclass(frozen=True)
-class Small:
-    """A small chart among many."""
-
-    title: str
-    svg: Markup
-
-
-@dataclass(frozen=True)
-class Figure:
-    """Charts, small charts of their parts, and the tables behind both."""
-
-    id: str
-    title: str
-    lead: str
-    legend: Sequence[Curve] = ()
-    charts: Sequence[Chart] = ()
-    smalls: Sequence[Small] = ()
-    smalls_lead: str = ""
-    tables: Sequence[Table] = ()
-    notes: Sequence[str] = ()
-    absent: Sequence[str] = ()
-
-
-@dataclass(frozen=True)
-class Brief:
-    """One headline figure: the number, its unit, what it is."""
-
-    number: str
-    unit: str
-    words: str
 
 
 @dataclass(frozen=True)
@@ -112,7 +70,7 @@ class Place:
         return [s for s in found if (s.chosen or not chosen) and any(v is not None for v in s.values)]
 
     def industry(self, code: str) -> str:
-        return _named(self.panel, "industry", code)
+        return named(self.panel, "industry", code)
 
     def reasons(self, *measures: str) -> list[str]:
         """Return why a measure is not there, as the run recorded it: first what names one of the measures."""
@@ -125,18 +83,6 @@ class Place:
         return (named or [message for message, _ in rows])[:5]
 
 
-@dataclass(frozen=True)
-class Section:
-    """One area and sector: headline figures, then the figures."""
-
-    id: str
-    area: str
-    sector: str
-    brief: Sequence[Brief]
-    figures: Sequence[Figure]
-    statuses: Sequence[str] = field(default=())
-
-
 def section(panel: Panel, area: str, sector: str, number: int) -> Section:
     """Return the section of one area and sector of a panel."""
     place = Place(panel, area, sector, f"s{number}")
@@ -145,8 +91,8 @@ def section(panel: Panel, area: str, sector: str, number: int) -> Section:
     names = panel.names["obs_status"]
     return Section(
         place.id,
-        _named(panel, "area", area),
-        _named(panel, "sector", sector),
+        named(panel, "area", area),
+        named(panel, "sector", sector),
         brief(place),
         figures,
         [f"{code} {names[code].lower()}" for code in names if code in used],
@@ -167,13 +113,13 @@ def stocks(place: Place) -> Figure:
     notes: list[str] = []
 
     def drawn(group: Sequence[Published], text: Text, size: Size) -> Markup:
-        factor, unit = _scaled(place.panel, group)
+        factor, unit = scaled(place.panel, group)
         parts = [s for s in group if s.asset != "_T"]
         stackable = adds_up(group)
         shown = parts if stackable else list(group)
         curves = [
             Curve(
-                "Total" if s.asset == "_T" else _asset(place.panel, s.asset),
+                "Total" if s.asset == "_T" else asset_name(place.panel, s.asset),
                 "Total" if s.asset == "_T" else s.asset,
                 _times(s.values, factor),
                 charts.INK if s.asset == "_T" else colours[s.asset],
@@ -189,11 +135,11 @@ def stocks(place: Place) -> Figure:
         scale = charts.axis([v for c in curves for v in c.values], True, ticks)
         return charts.line_chart(text, years, curves, scale, size)
 
-    if any(s.asset != "_T" for s in total) and not adds_up(total):
+    if len(total) > 1 and not adds_up(total):
         notes.append("The assets shown do not add up to a published total in every year: lines, not stacked.")
     groups = _by_industry(found)
     text = Text(f"{place.id}-stocks", f"{draft.title}, {place.area}", lead, "")
-    legend = [Curve(_asset(place.panel, a), a, (), colours[a]) for a in assets]
+    legend = [Curve(asset_name(place.panel, a), a, (), colours[a]) for a in assets]
     return replace(
         draft,
         legend=legend,
@@ -201,14 +147,14 @@ def stocks(place: Place) -> Figure:
         smalls=_smalls(place, groups, text, lambda code, t: drawn(groups[code], t, SMALL)),
         smalls_lead="By industry, each on its own scale." + _left_out(groups),
         tables=[
-            _yearly(
-                f"{draft.title}, {place.industry(code)}, {_unit(place.panel, group[0])}",
+            yearly_table(
+                f"{draft.title}, {place.industry(code)}, {unit_words(place.panel, group[0])}",
                 years,
                 [
-                    ("Total" if s.asset == "_T" else f"{s.asset} {_asset(place.panel, s.asset)}", s)
+                    ("Total" if s.asset == "_T" else f"{s.asset} {asset_name(place.panel, s.asset)}", s)
                     for s in group
                 ],
-                _money,
+                money,
             )
             for code, group in _shown({"_T": total, **groups}).items()
             if group
@@ -257,11 +203,11 @@ def shares(place: Place) -> Figure:
         smalls=_smalls(place, groups, text, lambda code, t: drawn(groups[code], t, common, SMALL_WORDS)),
         smalls_lead="By industry, all on one scale." + _left_out(groups),
         tables=[
-            _yearly(
+            yearly_table(
                 f"{draft.title}, {place.industry(code)}, {text.unit}",
                 years,
                 [(s.method.replace("_", " ") + (" (used)" if s.chosen else ""), s) for s in group],
-                _percent,
+                percent,
             )
             for code, group in _shown({"_T": total, **groups}).items()
             if group
@@ -313,16 +259,16 @@ def growth(place: Place) -> Figure:
         return charts.row_chart(t, names, mean_parts, mean_output, mean_scale, size)
 
     drawn = [_both(text, by_year, f"{place.industry('_T')}, year by year")] if "_T" in parts else []
-    if means:
+    if len(means) > 1:
         mean_text = replace(text, id=f"{text.id}-mean", title=f"{mean_title}, {place.area}")
         drawn.append(_both(mean_text, by_row, mean_title))
     heads = [*(name for _, name, _ in CONTRIBUTIONS), "Output"]
     yearly_tables = [
-        _yearly(
+        yearly_table(
             f"{draft.title}, {place.industry(c)}, {unit}",
             years,
             list(zip(heads, [by_key[m, c] for m in measures], strict=True)),
-            _percent,
+            percent,
         )
         for c in _shown(dict.fromkeys(industries))
     ]
@@ -331,7 +277,7 @@ def growth(place: Place) -> Figure:
         "Industry",
         heads,
         [
-            (name, [Cell(v, _percent(v)) for v in mean.values])
+            (name, [Cell(v, percent(v)) for v in mean.values])
             for name, mean in zip(names, means.values(), strict=True)
         ],
     )
@@ -371,11 +317,11 @@ def residual(place: Place) -> Figure:
         smalls=_smalls(place, groups, text, lambda code, t: drawn(groups[code], grey, code, t, every, SMALL)),
         smalls_lead="By industry, all on one scale; the total in grey." + _left_out(groups),
         tables=[
-            _yearly(
+            yearly_table(
                 f"{draft.title}, {text.unit}",
                 years,
                 [(place.industry(s.industry), s) for s in [*total, *(g[0] for g in _shown(groups).values())]],
-                _level,
+                level,
             )
         ],
     )
@@ -384,7 +330,7 @@ def residual(place: Place) -> Figure:
 def basis(place: Place) -> Figure:
     """Return what the net stock rests on: observed, imputed and assumed parts over time."""
     found = [s for s in place.series("net_stock", "constant") if s.industry == "_T"]
-    lead = "Parts of the net stock that rest on observed figures, on imputed ones and on assumptions (a starting stock)."
+    lead = "How much of the net stock rests on observed figures, on imputed ones and on assumptions (starting stocks)."
     draft = Figure(f"{place.id}-basis", "What the stock rests on", lead)
     if not found:
         return replace(draft, absent=place.reasons("net_stock", "investment"))
@@ -399,23 +345,23 @@ def basis(place: Place) -> Figure:
             Curve(
                 name,
                 name,
-                [None if v is None else min(max(100 * v, 0.0), 100.0) for v in values],
+                [None if v is None else max(100 * v, 0.0) for v in values],
                 colour,
             )
             for (name, colour), values in zip(parts, held, strict=True)
         ]
         return charts.area_chart(t, years, curves, scale, size)
 
-    total = [s for s in found if s.asset == "_T"]
-    groups = {s.asset: [s] for s in found if s.asset != "_T"}
+    whole = [s for s in found if s.asset == "_T" or len(found) == 1]
+    groups = {s.asset: [s] for s in found if s.asset != "_T" and len(found) > 2}
 
     def title(code: str) -> str:
-        return "Total, all assets" if code == "_T" else f"{code} {_asset(place.panel, code)}"
+        return "Total, all assets" if code == "_T" else f"{code} {asset_name(place.panel, code)}"
 
     return replace(
         draft,
         legend=[Curve(name, "", (), colour) for name, colour in parts],
-        charts=[_both(text, lambda t, size: drawn(total[0], t, size), narrow=NARROW_WORDS)] if total else (),
+        charts=[_both(text, lambda t, size: drawn(whole[0], t, size), narrow=NARROW_WORDS)] if whole else (),
         smalls=_smalls(place, groups, text, lambda code, t: drawn(groups[code][0], t, SMALL_WORDS), title),
         smalls_lead="By asset." + _left_out(groups),
         tables=[
@@ -424,11 +370,11 @@ def basis(place: Place) -> Figure:
                 "Year",
                 [name for name, _ in parts],
                 [
-                    (str(year), [Cell(v, _percent(v)) for v in held])
+                    (str(year), [Cell(v, percent(v)) for v in held])
                     for year, *held in zip(years, s.observed, s.imputed, s.assumed, strict=True)
                 ],
             )
-            for s in [*total, *(g[0] for g in _shown(groups).values())]
+            for s in [*whole, *(g[0] for g in _shown(groups).values())]
         ],
     )
 
@@ -439,15 +385,15 @@ def brief(place: Place) -> list[Brief]:
     facts = place.panel.facts
     for s in place.series("net_stock", "constant"):
         if (s.industry, s.asset) == ("_T", "_T"):
-            factor, unit = _scaled(place.panel, [s])
+            factor, unit = scaled(place.panel, [s])
             i = _last(s.values)
             words = (
                 f"net capital stock at the end of {place.panel.years[i]}, prices of {facts['reference_year']}"
             )
             observed = s.observed[i]
             if observed is not None:
-                words += f"; {_written(100 * observed, 1)} % of it rests on observed figures"
-            out.append(Brief(_short((s.values[i] or 0.0) * factor), unit.split(",")[0], words))
+                words += f"; {written(100 * observed, 1)} % of it rests on observed figures"
+            out.append(Brief(short((s.values[i] or 0.0) * factor), unit.split(",")[0], words))
     for s in place.series("labour_share"):
         if s.industry == "_T":
             i = _last(s.values)
@@ -462,7 +408,7 @@ def brief(place: Place) -> list[Brief]:
     total = {s.measure: s for m in measures for s in place.series(m) if s.industry == "_T"}
     mean = _mean(place.panel.years, [total[m] for m in measures]) if len(total) == len(measures) else None
     if mean is not None:
-        capital, labour, rest, output = (_written(100 * v, 2) for v in mean.values)
+        capital, labour, rest, output = (written(100 * v, 2) for v in mean.values)
         words = f"mean growth of output {mean.first}–{mean.last}: capital {capital}, labour {labour}, residual {rest}"
         unit = "% a year, log form" if total[OUTPUT].method == "log" else "% a year"
         out.append(Brief(output, unit, words))
@@ -470,9 +416,9 @@ def brief(place: Place) -> list[Brief]:
 
 
 def adds_up(group: Sequence[Published]) -> bool:
-    """Whether the assets can be stacked: none negative, and wherever there is a total they add up to it."""
+    """Whether the assets can be stacked: none negative, and adding up to the total in every year."""
     parts = [s.values for s in group if s.asset != "_T"]
-    totals = [s.values for s in group if s.asset == "_T"]
+    totals = [s.values for s in group if s.asset == "_T"] or parts
     if not parts or len(totals) != 1:
         return False
     for whole, *row in zip(totals[0], *parts, strict=True):
@@ -539,25 +485,6 @@ def _trimmed(years: range, found: Sequence[Published]) -> tuple[range, list[Publ
     ]
 
 
-def _yearly(
-    caption: str,
-    years: Sequence[int],
-    columns: Sequence[tuple[str, Published]],
-    write: Callable[[Value], str],
-) -> Table:
-    rows = [
-        (
-            str(year),
-            [
-                Cell(s.values[i], write(s.values[i]), "" if s.statuses[i] == "A" else s.statuses[i])
-                for _, s in columns
-            ],
-        )
-        for i, year in enumerate(years)
-    ]
-    return Table(caption, "Year", [name for name, _ in columns], rows)
-
-
 def _equations(place: Place, methods: Sequence[str]) -> list[str]:
     """Return what each method computes, in the words of the formula that made its labour income."""
     rows = place.panel.rows(
@@ -610,61 +537,9 @@ def _tint(colour: str, white: float) -> str:
     return "#" + "".join(f"{round(p + (255 - p) * white):02x}" for p in parts)
 
 
-def _scaled(panel: Panel, group: Sequence[Published]) -> tuple[float, str]:
-    """Return the factor and the unit in which the largest figure of some series reads well."""
-    largest = max((abs(v) for s in group for v in s.values if v is not None), default=0.0)
-    steps = 0
-    while (
-        largest / 1000**steps >= 20_000
-        and str(group[0].unit_mult + 3 * (steps + 1)) in panel.names["unit_mult"]
-    ):
-        steps += 1
-    return 1000.0**-steps, _unit(panel, group[0], 3 * steps)
-
-
-def _unit(panel: Panel, series: Published, shift: int = 0) -> str:
-    power = series.unit_mult + shift
-    words = panel.names["unit_mult"][str(power)].lower()
-    unit = series.unit if power == 0 else f"{words} of {series.unit}"
-    return f"{unit}, prices of {panel.facts['reference_year']}"
-
-
-def _named(panel: Panel, name: str, code: str) -> str:
-    words = panel.names[name].get(code, code)
-    return words if words == code or code == "_T" else f"{code} {words}"
-
-
-def _asset(panel: Panel, code: str) -> str:
-    return panel.names["asset"].get(code, code)
-
-
 def _times(values: Sequence[Value], factor: float) -> list[Value]:
     return [None if v is None else v * factor for v in values]
 
 
 def _last(values: Sequence[Value]) -> int:
     return max(i for i, v in enumerate(values) if v is not None)
-
-
-def _money(value: Value) -> str:
-    return _written(value, 0 if value is None or abs(value) >= 1000 else 2)
-
-
-def _percent(value: Value) -> str:
-    return _written(None if value is None else 100 * value, 2)
-
-
-def _level(value: Value) -> str:
-    return _written(value, 4)
-
-
-def _short(value: float) -> str:
-    return _written(value, 1 if abs(value) < 10_000 else 0)
-
-
-def _written(value: Value, digits: int) -> str:
-    """Return a figure with thousands marks and a true minus; "–" for none, no sign on a zero."""
-    if value is None:
-        return "–"
-    text = f"{value:,.{digits}f}"
-    return text.replace("-", "−") if any(c in "123456789" for c in text) else text.replace("-", "")

@@ -26,6 +26,7 @@ from keelbook.contracts.measures import Measure
 from keelbook.contracts.tables import Table
 from keelbook.frames import coded, constant
 from keelbook.stages.catalogue import FORMULAS
+from keelbook.store.append import append
 
 VIEWS = """
 create view panel as
@@ -61,6 +62,7 @@ class Writer:
         self._sets: dict[MethodSet, int] = {}
         self._parameters: dict[Choice, int] = {}
         self._suppressed = lists.position("obs_status", "Q")
+        self._hidden: set[tuple[str, str]] = set()
         for name in PANEL_TABLES:
             panel.execute(tables[name].create_sql())
         evidence.execute(tables["withheld_figure"].create_sql())
@@ -77,19 +79,32 @@ class Writer:
         edges = [frame for b, at in numbered.values() for frame in _edges(b, at, numbered)]
         if edges:
             self.insert("edge", pd.concat(edges))
+        for block, _ in numbered.values():
+            self._hidden |= _hidden_places(block)
         figures = pd.concat([_figures(b, at) for b, at in numbered.values()])
         hidden = figures["conf_status"].to_numpy() > 0
         if hidden.any():
             withheld = figures.loc[hidden, ["series_id", "period", "value"]]
-            _insert(self._evidence, self._tables["withheld_figure"], withheld, self._lists)
+            append(self._evidence, self._tables["withheld_figure"], withheld, self._lists)
             figures = figures.copy()
             figures.loc[hidden, "value"] = np.nan
             figures.loc[hidden, "obs_status"] = np.int8(self._suppressed)
         self.insert("figure", figures)
 
+    def withheld(self, found: pd.DataFrame) -> pd.DataFrame:
+        """Return findings as they may be published: where an area and industry hide a figure, without figures."""
+        places = zip(found["area"], found["industry"], strict=True)
+        hidden = np.array([place in self._hidden for place in places], bool)
+        if not hidden.any():
+            return found
+        out = found.copy()
+        out.loc[hidden, ["found", "expected"]] = WITHHELD
+        out.loc[hidden, "message"] = [f"{rule}: {WITHHELD}" for rule in out.loc[hidden, "rule"]]
+        return out
+
     def insert(self, name: str, frame: pd.DataFrame) -> None:
         """Check a frame against the contract of its table and append it to the panel."""
-        _insert(self._panel, self._tables[name], frame, self._lists)
+        append(self._panel, self._tables[name], frame, self._lists)
 
     def finish(self) -> None:
         """Write the tables that describe the figures, and the views."""
@@ -168,6 +183,8 @@ class Writer:
                 rows.append((number, position, link.role, *key, link.kind, project, link.shift))
         return _typed(rows, self._tables["derivation"])
 
+
+WITHHELD = "withheld: figures of this area and industry are confidential; the evidence file has the details"
 
 PANEL_TABLES = (
     "series",
@@ -248,6 +265,14 @@ def _resolved(key: BlockKey, wanted: Any, numbered: Mapping[BlockKey, tuple[Bloc
             yield position, at
 
 
+def _hidden_places(block: Block) -> set[tuple[str, str]]:
+    """Return the areas and industries of series with a confidential figure."""
+    if block.conf is None:
+        return set()
+    labels = [block.series.table.labels(int(k)) for k in block.series.key[(block.conf > 0).any(axis=0)]]
+    return {(label["area"], label["industry"]) for label in labels}
+
+
 def _figures(block: Block, first: int) -> pd.DataFrame:
     """Return the figures of a block series by series, so that one series lies together in the file."""
     status = status_of(block).T
@@ -268,10 +293,3 @@ def _figures(block: Block, first: int) -> pd.DataFrame:
             "assumed_part": column(block.assumed, np.float32),
         }
     )
-
-
-def _insert(con: duckdb.DuckDBPyConnection, table: Table, frame: pd.DataFrame, lists: CodeLists) -> None:
-    table.validate(frame.reset_index(drop=True), lists)
-    con.register("_frame", frame)
-    con.execute(f'insert into "{table.table}" by name select * from _frame')
-    con.unregister("_frame")

@@ -13,9 +13,10 @@ from keelbook import findings
 from keelbook.contracts.codes import load_code_lists
 from keelbook.contracts.measures import load_measures
 from keelbook.contracts.screening_rules import KINDS, ScreeningRule, load_screening_rules
-from keelbook.stages import screening
+from keelbook.stages import screening, screening_report
 from keelbook.stages.observed import dense_numbers
-from keelbook.stages.screening import CHECKS, ScreeningContext, screen
+from keelbook.stages.screening import CHECKS, screen
+from keelbook.stages.screening_report import ScreeningContext
 
 LISTS = load_code_lists()
 DIMENSIONS = ("area", "sector", "industry", "asset", "worker_group")
@@ -63,6 +64,7 @@ def observations(rows: Sequence[dict[str, Any]]) -> pd.DataFrame:
 
 CONTEXT = ScreeningContext(
     period=(2000, 2003),
+    reference_year=2001,
     lists=LISTS,
     measures=load_measures(),
     files={1: "capital.xlsx", 2: "hours.csv"},
@@ -148,7 +150,8 @@ def test_duplicates_among_keys_too_many_for_a_table(monkeypatch: pytest.MonkeyPa
 
 
 def test_more_findings_than_are_listed_are_counted(monkeypatch: pytest.MonkeyPatch) -> None:
-    monkeypatch.setattr(screening, "LISTED", 2)
+    for module in (screening, screening_report):
+        monkeypatch.setattr(module, "LISTED", 2)
     found = applied([*years(2000, 2002), *years(2000, 2002)], "duplicate_key", severity="stop")
     assert list(found["row"].fillna(0)) == [14, 15, 0]
     assert found["found"].iloc[2] == "1 more like the 2 listed"
@@ -465,13 +468,29 @@ def test_the_shipped_rules_stop_first_and_leave_the_data_alone() -> None:
     before = frame.copy(deep=True)
     found = screen(frame, load_screening_rules(), CONTEXT)
     pd.testing.assert_frame_equal(frame, before)
-    assert list(found["rule"]) == ["duplicate_key", "unknown_code", "coverage", "coverage", "no_period"]
+    assert list(found["rule"]) == [
+        "duplicate_key",
+        "unknown_code",
+        "coverage",
+        "coverage",
+        "no_period",
+        "decomposition_inputs",
+    ]
     assert list(found.columns) == list(findings.COLUMNS)
     assert {str(found[name].dtype) for name in ("row", "level")} == {"Int64"}
 
 
 def test_the_shipped_rules_find_nothing_in_clean_data() -> None:
-    rows = [row for name in ("C", "F") for row in years(2000, 2003, industry=name)]
+    labour = {"asset": "_Z", "worker_group": "SAL"}
+    given: list[dict[str, Any]] = [
+        {},
+        {"measure": "value_added", "asset": "_Z"},
+        {**labour, "measure": "hours_worked", "price_basis": "_Z"},
+        {**labour, "measure": "compensation_of_employees"},
+    ]
+    rows = [row for name in ("C", "F") for one in given for row in years(2000, 2003, industry=name, **one)]
+    rules = [rule for rule in load_screening_rules() if rule.id != "income_identity"]
+    assert screen(observations(rows), rules, CONTEXT).empty
     assert screen(observations(rows), load_screening_rules(), CONTEXT).empty
 
 
