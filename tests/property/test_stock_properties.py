@@ -6,6 +6,7 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 from hypothesis.extra.numpy import arrays
 
+from keelbook.methods.benchmark import benchmark_factor, closing_stock, even_changes, rate_between
 from keelbook.methods.initial_stock import (
     log_trend_coefficients,
     opening_remainder,
@@ -15,8 +16,9 @@ from keelbook.methods.initial_stock import (
 )
 from keelbook.methods.perpetual_inventory import cohort_stock, cohort_stocks, geometric_stock
 from keelbook.methods.profiles import age_price, efficiency, efficiency_from_age_price
+from keelbook.methods.retirement import lives
 from keelbook.methods.valuation import holding_gains
-from keelbook.methods.weights import AGE_AT_PERIOD_END, period_end_weights
+from keelbook.methods.weights import AGE_AT_PERIOD_END, AGE_PRICE_MODES, period_end_weights
 
 quick = settings(max_examples=40, deadline=None)
 
@@ -27,15 +29,36 @@ timings = st.sampled_from(sorted(AGE_AT_PERIOD_END))
 rates = st.floats(0.01, 0.6)
 
 
+shapes = st.one_of(
+    st.just(("simultaneous", ())),
+    st.just(("linear", ())),
+    st.floats(0.05, 1).map(lambda c: ("delayed_linear", (("half_width", c),))),
+    st.floats(0.05, 0.6).map(lambda sd: ("truncated_normal", (("sd", sd), ("low", 0.02), ("high", 1.98)))),
+    st.floats(0.05, 0.6).map(lambda sd: ("lognormal", (("sd", sd), ("high", 3.0)))),
+    st.floats(0.8, 5).map(lambda a: ("weibull", (("shape", a), ("high", 3.0)))),
+    st.floats(1, 20).map(lambda p: ("gamma", (("shape", p), ("high", 3.0)))),
+    st.floats(0, 15).map(lambda m: ("winfrey", (("exponent", m),))),
+    st.floats(0.1, 0.55).map(lambda sd: ("winfrey_moment", (("sd", sd),))),
+)
+"""Every retirement distribution with some of its parameters."""
+
+
 @st.composite
 def finite_weights(
-    draw, forms=("geometric", "hyperbolic", "linear", "constant"), lowest_b=-3.0, lowest_discount=-0.02
+    draw,
+    forms=("geometric", "hyperbolic", "linear", "constant"),
+    lowest_b=-3.0,
+    lowest_discount=-0.02,
+    retirements=shapes,
 ):
-    """Return the weights of an asset class with a finite life, whole or fractional."""
+    """Return the weights of an asset class with a finite life, whole or fractional, fixed or spread."""
     form = draw(st.sampled_from(forms))
+    retirement, shape = draw(retirements)
     return period_end_weights(
         efficiency=form,
-        retirement="simultaneous",
+        retirement=retirement,
+        retirement_shape=shape,
+        age_price_mode=draw(st.sampled_from(AGE_PRICE_MODES)),
         life=draw(st.one_of(st.integers(1, 30), st.floats(1, 30))),
         rate=draw(rates) if form == "geometric" else None,
         b=draw(st.floats(lowest_b, 1)) if form == "hyperbolic" else None,
@@ -168,20 +191,46 @@ def test_steady_state_start_is_a_fixed_point_for_the_cohort_geometric(rate, timi
 
 @quick
 @given(
-    investments, finite_weights(forms=("hyperbolic", "linear", "constant"), lowest_b=0.0, lowest_discount=0.0)
+    investments,
+    finite_weights(
+        forms=("hyperbolic", "linear", "constant"),
+        lowest_b=0.0,
+        lowest_discount=0.0,
+        retirements=st.just(("simultaneous", ())),
+    ),
 )
-def test_net_is_at_most_productive_and_productive_at_most_gross(investment, weights):
+def test_net_is_at_most_productive(investment, weights):
     """For efficiency that falls ever faster, discount rates and investment of 0 or more.
 
     Not for geometric decline with a finite life: at mid-period its price is a mean of two ages, which can lie
-    above the efficiency at the exact age between them.
+    above the efficiency at the exact age between them. Not for spread lives either: those that retire early pull
+    the efficiency of the vintage down at first, and what is left then falls more slowly.
     """
-    gross, productive, net = cohort_stocks(
-        investment, np.stack([weights.gross, weights.productive, weights.net])
+    productive, net = cohort_stocks(investment, np.stack([weights.productive, weights.net]))
+    assert np.all(net <= productive + 1e-12 * investment.sum(axis=0))
+
+
+@quick
+@given(investments, finite_weights())
+def test_productive_is_at_most_gross(investment, weights):
+    gross, productive = cohort_stocks(investment, np.stack([weights.gross, weights.productive]))
+    assert np.all(productive <= gross + 1e-12 * investment.sum(axis=0))
+
+
+def test_spread_lives_can_be_worth_more_than_they_still_serve():
+    """Linear efficiency over gamma lives: after a year 0.50 of the value is left and 0.45 of the service."""
+    weights = period_end_weights(
+        efficiency="linear",
+        retirement="gamma",
+        retirement_shape=(("shape", 1.0), ("high", 3.0)),
+        life=3.0,
+        rate=None,
+        b=None,
+        discount_rate=0.0,
+        timing="end",
+        length=1,
     )
-    slack = 1e-12 * investment.sum(axis=0)
-    assert np.all(net <= productive + slack)
-    assert np.all(productive <= gross + slack)
+    assert weights.net[1] > weights.productive[1]
 
 
 @quick
@@ -218,3 +267,93 @@ def test_the_account_at_current_prices_closes(prices, opening, change):
     gains = holding_gains(opening, closing, p, pe, pe_previous)
     found = pe_previous * opening + p * change + gains
     assert_close(found, pe * closing, (p + pe + pe_previous) * (opening + closing) * 2)
+
+
+@quick
+@given(shapes, st.floats(1, 80))
+def test_every_spread_of_lives_keeps_its_mean(shape, mean_life):
+    which, masses = lives(shape[0], mean_life, **dict(shape[1]))
+    assert masses.sum() == pytest.approx(1, abs=1e-9)
+    assert masses @ which == pytest.approx(mean_life, abs=1e-9)
+
+
+@quick
+@given(
+    shapes,
+    st.floats(1, 30),
+    st.sampled_from(["hyperbolic", "linear", "constant"]),
+    st.floats(0, 0.1),
+    timings,
+)
+def test_pooled_prices_are_not_below_the_mean_of_single_prices(shape, life, form, discount_rate, timing):
+    """Longer-lived assets are worth more when new and lose less: pooling gives them their weight."""
+    pooled, by_life = (
+        period_end_weights(
+            efficiency=form,
+            retirement=shape[0],
+            retirement_shape=shape[1],
+            life=life,
+            rate=None,
+            b=0.5 if form == "hyperbolic" else None,
+            discount_rate=discount_rate,
+            timing=timing,
+            length=1,
+            age_price_mode=mode,
+        )
+        for mode in ("pooled", "by_life")
+    )
+    assert np.all(by_life.net <= pooled.net + 1e-12)
+    np.testing.assert_array_equal(by_life.gross, pooled.gross)
+
+
+flows = st.integers(1, 12).flatmap(
+    lambda periods: arrays(np.float64, (periods, 3), elements=st.floats(0, 100, allow_subnormal=False))
+)
+
+
+@quick
+@given(arrays(np.float64, 3, elements=st.floats(1, 1000)), flows, rates, timings)
+def test_the_rate_between_two_stocks_of_the_model_is_its_own(opening, investment, rate, timing):
+    """With investment of 0 or more the stock falls as the rate rises, so there is no other."""
+    closing = closing_stock(opening, investment, np.full(3, rate), timing)
+    solved = rate_between(opening, closing, investment, timing)
+    assert solved.roots.tolist() == [1, 1, 1]
+    assert_close(solved.residual, 0.0, opening + investment.sum(axis=0))
+    slope = closing_stock(opening, investment, np.full(3, rate - 1e-3), timing) - closing
+    seen = slope > 1e-6 * closing
+    np.testing.assert_allclose(solved.rate[seen], rate, atol=1e-9)
+
+
+@quick
+@given(flows, rates, timings)
+def test_the_stock_between_two_dates_is_that_of_the_recursion(investment, rate, timing):
+    opening = np.full(3, 50.0)
+    first = cohort_geometric(rate, timing, 1).net[0]
+    stock = geometric_stock(investment, first, 1 - rate, opening)
+    assert_close(
+        closing_stock(opening, investment, np.full(3, rate), timing), stock[-1], 50 + investment.sum(axis=0)
+    )
+
+
+@quick
+@given(investments, finite_weights(), st.floats(-0.1, 0.2), st.floats(0, 3))
+def test_a_benchmark_taken_from_the_model_gives_back_its_factor(investment, weights, growth, factor):
+    g = np.full(investment.shape[1], growth)
+    surviving = cohort_stock(investment, weights.net)[-1]
+    backcast = 100 * opening_vintages(weights.net, g, len(investment))[-1]
+    found = benchmark_factor(surviving + factor * backcast, surviving, backcast)
+    assert np.array_equal(np.isnan(found), backcast == 0)
+    left = backcast > 0
+    assert_close((found * backcast)[left], (factor * backcast)[left], (surviving + factor * backcast)[left])
+
+
+@quick
+@given(investments, rates, timings, st.floats(-1e3, 1e3))
+def test_equal_changes_lead_to_the_later_benchmark(investment, rate, timing, gap):
+    first = cohort_geometric(rate, timing, 1).net[0]
+    left = (1 - rate) ** np.arange(float(len(investment)))
+    change = even_changes(np.array([gap]), left)
+    stock = geometric_stock(investment, first, 1 - rate, None)[-1]
+    # A change at the end of a period enters whole, as investment at its end does.
+    added = geometric_stock(np.full_like(investment, change[0]), 1.0, 1 - rate, None)[-1]
+    assert_close(stock + added, stock + gap, stock + abs(gap))

@@ -1,1 +1,43 @@
-"""Makes `small_blocks` importable from every folder of unit tests."""
+"""Builds that several folders of unit tests look at; being here also makes `small_blocks` importable."""
+
+import shutil
+from collections.abc import Callable
+from pathlib import Path
+
+import pytest
+
+from keelbook.assembly.new import write_new
+from keelbook.assembly.run import assemble
+
+HIDDEN_RAW, HIDDEN_YEAR = "123.4567", 2010
+"""The one confidential figure of `hidden_build`: investment of industry C in asset N11O."""
+
+
+@pytest.fixture(scope="session")
+def hidden_build(tmp_path_factory: pytest.TempPathFactory) -> Path:
+    """Return an assembled first assembly in which one source cell is confidential."""
+    folder = tmp_path_factory.mktemp("hidden") / "assembly"
+    write_new(folder)
+    source = folder / "sources" / "investment.csv"
+    title, head, *rows = source.read_text(encoding="utf-8").splitlines()
+    cell = f"Manufacturing,Machinery,{HIDDEN_YEAR},"
+    marked = [f"{cell}{HIDDEN_RAW},C" if row.startswith(cell) else f"{row},F" for row in rows]
+    source.write_text("\n".join([title, f"{head},conf", *marked]) + "\n", encoding="utf-8")
+    declaration = folder / "assembly.toml"
+    text = declaration.read_text(encoding="utf-8")
+    declared = text.replace('asset = "asset"\n', 'asset = "asset"\nconf_status = "conf"\n', 1)
+    declaration.write_text(declared, encoding="utf-8")
+    assemble(folder)
+    return folder
+
+
+@pytest.fixture
+def copy_build(tmp_path: Path) -> Callable[[Path], Path]:
+    """Return a copier of the current generation of an assembly, for tests that spoil it."""
+
+    def copy(assembly: Path) -> Path:
+        target = tmp_path / "copy"
+        shutil.copytree((assembly / "build" / "current").resolve(), target)
+        return target
+
+    return copy

@@ -191,7 +191,7 @@ class Build:
                     str(self.path.with_name(EVIDENCE)),
                     found="no evidence file beside the panel",
                     expected="evidence.duckdb of the same build",
-                    remedy="trace in the build folder, or stop at the delivered figure with --depth",
+                    remedy="trace in the build folder, or a figure that is computed",
                 )
             )
         names = (*DIMS, "measure", "price_basis")

@@ -1,6 +1,6 @@
 """Trace: re-perform one figure from its stored inputs, and explain it term by term down to the source cell."""
 
-from collections.abc import Iterator, Mapping
+from collections.abc import Mapping
 from dataclasses import dataclass, field
 from typing import Any
 
@@ -178,13 +178,9 @@ def must_reproduce(traced: Traced) -> None:
         )
 
 
-def descend(build: Build, traced: Traced) -> Iterator[tuple[Input, "Traced | None"]]:
-    """Yield every term of a figure with its own trace; None for a source cell or a figure of another kind."""
-    for item in traced.inputs:
-        if item.series is not None:
-            yield item, trace(build, item.series, int(item.period))
-        else:
-            yield item, None
+def rests_on_cells(build: Build, series: Series) -> bool:
+    """Return whether a series is read from source cells, which are in the evidence file."""
+    return any(link.kind == "observation" for link in build.links(series.formula_id))
 
 
 @dataclass(frozen=True)

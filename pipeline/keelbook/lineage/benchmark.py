@@ -14,7 +14,7 @@ from keelbook.lineage.primitives import Parts, Term, _ratio
 class BenchmarkFactor:
     """lambda with K_b = sum_v w(v) I_(b-v) + lambda x remainder(b) x opening, at the opening's period.
 
-    Arguments: benchmark (T, N), of which the first period with a figure after the opening counts; flow, opening and
+    Arguments: benchmark (T, N), of which the first figure from the opening's period on counts; flow, opening and
     growth as `Lag` takes them. The opening sets the shape of what is scaled and has no term of its own.
     Source: methods as in OECD, Measuring Capital (2009), stocks from a benchmark.
     """
@@ -25,13 +25,17 @@ class BenchmarkFactor:
         """Return the opening rows, the benchmark rows, what is scaled, lambda, and where there is one."""
         benchmark, flow, opening, growth = x
         o, live = self.lag._start(flow, opening)
-        usable = live & np.isfinite(benchmark)
-        b = np.argmax(usable, axis=0)
         n = np.arange(flow.shape[1])
-        kept = np.where(live, flow, 0.0)
         at, g = opening[o, n], growth[o, n]
-        invested = self.lag._apply(kept, np.zeros_like(at), g, o, live)[b, n]
-        scaled = self.lag._apply(np.zeros_like(kept), at, g, o, live)[b, n]
+        usable = live.copy()
+        usable[o, n] = np.isfinite(at)
+        usable &= np.isfinite(benchmark)
+        b = np.argmax(usable, axis=0)
+        kept = np.where(live, flow, 0.0)
+        # A benchmark of the opening's own date is met by the opening alone.
+        later = b > o
+        invested = np.where(later, self.lag._apply(kept, np.zeros_like(at), g, o, live)[b, n], 0.0)
+        scaled = np.where(later, self.lag._apply(np.zeros_like(kept), at, g, o, live)[b, n], at)
         with np.errstate(invalid="ignore", divide="ignore"):
             factor = (benchmark[b, n] - invested) / scaled
         return o, b, scaled, factor, np.asarray(usable.any(axis=0) & np.isfinite(factor))

@@ -11,6 +11,8 @@ from typing import Literal
 
 from markupsafe import Markup, escape
 
+from keelbook.outputs.text import shown
+
 INK, MUTED, RULE = "#1b2530", "#56616d", "#dde2e7"
 PALETTE = ("#17365c", "#d9942a", "#2b8c80", "#96292b", "#7fb2de", "#77741a", "#8f5fa8", "#d5a294")
 """Eight colours that stay apart under the three colour vision deficiencies; chosen for this report."""
@@ -328,8 +330,12 @@ def _signed(value: float) -> str:
     return text.replace("-", "−") if float(text) else "0.00"
 
 
+def _safe(text: str) -> Markup:
+    return escape(shown(text))
+
+
 def _words(x: float, y: float, words: str, anchor: Literal["start", "middle", "end"], kind: str) -> str:
-    return f'<text x="{x:.1f}" y="{y:.1f}" text-anchor="{anchor}" class="{kind}">{escape(words)}</text>'
+    return f'<text x="{x:.1f}" y="{y:.1f}" text-anchor="{anchor}" class="{kind}">{_safe(words)}</text>'
 
 
 def _line(x0: float, y0: float, x1: float, y1: float, colour: str) -> str:
@@ -345,8 +351,8 @@ def _ring(x: float, y: float, radius: float, colour: str) -> str:
 def _svg(text: Text, width: float, height: float, parts: Sequence[str]) -> Markup:
     head = (
         f'<svg viewBox="0 0 {width:.0f} {height:.0f}" role="img" '
-        f'aria-labelledby="{escape(text.id)}-t {escape(text.id)}-d">'
-        f'<title id="{escape(text.id)}-t">{escape(text.title)}</title>'
-        f'<desc id="{escape(text.id)}-d">{escape(text.description)} Unit: {escape(text.unit)}.</desc>'
+        f'aria-labelledby="{_safe(text.id)}-t {_safe(text.id)}-d">'
+        f'<title id="{_safe(text.id)}-t">{_safe(text.title)}</title>'
+        f'<desc id="{_safe(text.id)}-d">{_safe(text.description)} Unit: {_safe(text.unit)}.</desc>'
     )
     return Markup(head + "".join(parts) + "</svg>")

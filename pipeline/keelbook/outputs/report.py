@@ -110,6 +110,7 @@ def _findings(panel: Panel) -> list[dict[str, str]]:
     names = (
         "severity", "rule", "message", "file", "sheet", "row", "column",
         "measure", "area", "sector", "industry", "asset", "worker_group", "time_period", "remedy",
+        "accepted_by", "accepted_on", "accepted_reason",
     )  # fmt: skip
     columns = ", ".join(f'"{name}"' for name in names)
     rows = panel.rows(
@@ -128,6 +129,11 @@ def _findings(panel: Panel) -> list[dict[str, str]]:
                 "where": _where(held),
                 "key": " / ".join(key),
                 "remedy": held["remedy"],
+                "accepted": (
+                    f"accepted by {held['accepted_by']} on {held['accepted_on']}: {held['accepted_reason']}"
+                    if held["accepted_by"]
+                    else ""
+                ),
             }
         )
     return out

@@ -79,7 +79,7 @@ class Section:
     sector: str
     brief: Sequence[Brief]
     figures: Sequence[Figure]
-    statuses: Sequence[str] = field(default=())
+    statuses: Sequence[str]
 
 
 def yearly_table(

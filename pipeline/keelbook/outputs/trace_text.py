@@ -5,7 +5,7 @@ from dataclasses import asdict
 from typing import Any
 
 from keelbook.audit.reading import Build, Cell
-from keelbook.audit.trace import Input, Traced, must_reproduce, trace
+from keelbook.audit.trace import Input, Traced, must_reproduce, rests_on_cells, trace
 from keelbook.outputs.text import number, shown
 
 SHOWN_TERMS = 6
@@ -38,6 +38,8 @@ def _figure(build: Build, traced: Traced, depth: int, every_term: bool, indent: 
         follow = depth > 1 or at == 0
         if item.cell is not None:
             yield from _cell(item.cell, inner + "  ")
+        elif item.series is not None and not build.has_evidence and rests_on_cells(build, item.series):
+            yield f"{inner}  (its source cells are in the evidence file, which is not beside this panel)"
         elif follow and item.series is not None:
             below = trace(build, item.series, int(item.period))
             yield from _figure(build, below, depth - 1, every_term, inner + "  ")
@@ -114,7 +116,7 @@ def _term_json(build: Build, item: Input, depth: int) -> dict[str, Any]:
     }
     if item.series is not None:
         out["series"] = {"series_id": item.series.series_id, **item.series.key}
-        if depth > 1:
+        if depth > 1 and (build.has_evidence or not rests_on_cells(build, item.series)):
             out["figure"] = as_json(build, trace(build, item.series, int(item.period)), depth - 1)
     if item.cell is not None:
         out["cell"] = {

@@ -12,6 +12,7 @@ from keelbook.lineage.derive import Given, derive, given, line_up
 from keelbook.lineage.formula import Formula, Role, Setting
 from keelbook.lineage.lag import GeometricKernel, Kernel, Lag, TableKernel
 from keelbook.lineage.primitives import Each, Span, Spans
+from keelbook.methods.benchmark import rate_between
 from keelbook.methods.initial_stock import (
     log_trend_coefficients,
     opening_stock_geometric,
@@ -185,7 +186,9 @@ FORMULAS = (TREND_GROWTH, TREND_INVESTMENT, *OPENING.values(), *FACTOR.values(),
 
 @dataclass(frozen=True)
 class StartParams:
-    """initial_stock: `steady_state`, or `benchmark` where one is delivered and a steady state elsewhere."""
+    """initial_stock: `steady_state`; `benchmark` where one is delivered, a steady state elsewhere; or
+    `two_benchmarks`, where the depreciation rate is solved too.
+    """
 
     initial_stock: Choice
     trend_window: Choice
@@ -257,7 +260,7 @@ def start(
     blocks.extend(steady.values())
     findings = _no_start(investment, growth, sets, which)
     factor = None
-    if params.initial_stock.value == "benchmark":
+    if params.initial_stock.value in ("benchmark", "two_benchmarks"):
         factor = _factors(investment, sets, which, benchmarks, steady, growth, params)
     if factor is None:
         return Start(growth, {m: given(b) for m, b in steady.items()}, blocks, findings)
@@ -340,6 +343,63 @@ def _factors(
         left &= block.series.locate(keys) < 0
         out.append(block)
     return merge(out) if out else None
+
+
+def solved_rates(
+    investment: Block,
+    sets: tuple[MethodSet, ...],
+    which: I4,
+    benchmark: Block | None,
+    timing: Choice,
+    initial_stock: Choice,
+) -> tuple[tuple[MethodSet, ...], I4, list[dict[str, Any]]]:
+    """Return the asset parameters with the rate that leads from the first to the last benchmark of each series.
+
+    A series with geometric weights and two benchmarks gets a set of its own, in which the solved rate stands with
+    the residual of its equation; one without a rate in (0, 1) gets none (-1), with a finding. All others keep theirs.
+    """
+    if benchmark is None:
+        return sets, which, []
+    columns = benchmark.series.locate(investment.series.key)
+    out, of, findings = list(sets), which.copy(), []
+    for n in np.flatnonzero(columns >= 0):
+        choices = {c.name: c.value for c in sets[which[n]]}
+        flow, stock = investment.value[:, n], benchmark.value[:, columns[n]]
+        there = np.flatnonzero(np.isfinite(stock))
+        known = [int(t) for t in there if np.isfinite(flow[int(there[0]) + 1 : t + 1]).all()]
+        if choices["asset.efficiency"] != COHORT_GEOMETRIC or len(known) < 2:
+            continue
+        first, last = known[0], known[-1]
+        solved = rate_between(
+            stock[[first]], stock[[last]], flow[first + 1 : last + 1, None], str(timing.value)
+        )
+        years = f"{benchmark.periods[first]} and {benchmark.periods[last]}"
+        if np.isnan(solved.rate[0]):
+            of[n] = -1
+            findings.append(_no_rate_between(investment, int(n), years, int(solved.roots[0])))
+            continue
+        said = f"solved: leads from the benchmark of {years}, residual {solved.residual[0]:.3g}"
+        rate = Choice("asset.rate", float(solved.rate[0]), initial_stock.file, initial_stock.line, said)
+        kept = (c for c in sets[which[n]] if c.name not in ("asset.rate", "asset.declining_balance_rate"))
+        of[n] = len(out)
+        out.append((*kept, rate))
+    return tuple(out), of, findings
+
+
+def _no_rate_between(investment: Block, n: int, years: str, roots: int) -> dict[str, Any]:
+    return note(
+        "no_rate_between_benchmarks",
+        "note",
+        f"not computed: no rate in (0,1) leads from the benchmark of {years}"
+        if roots == 0
+        else f"not computed: {roots} rates in (0,1) lead from the benchmark of {years}",
+        investment.series.table,
+        int(investment.series.key[n]),
+        measure="net_stock",
+        found=f"{roots} rates",
+        expected="one rate above 0 and below 1",
+        remedy="check both benchmarks and the investment between them, or start from one benchmark alone",
+    )
 
 
 def _negative_factor(factor: Block) -> list[dict[str, Any]]:

@@ -13,7 +13,17 @@ from keelbook.lineage.primitives import Each
 from keelbook.stages.base import CHOSEN, Inputs, Result, Stage, keys, missing_input, note
 from keelbook.stages.deflation import by_edges, price_edges
 from keelbook.stages.starting_stock import FORMULAS as STARTING
-from keelbook.stages.starting_stock import LOSSES, STOCKS, Start, StartParams, defined, lag, read_for, start
+from keelbook.stages.starting_stock import (
+    LOSSES,
+    STOCKS,
+    Start,
+    StartParams,
+    defined,
+    lag,
+    read_for,
+    solved_rates,
+    start,
+)
 from keelbook.stages.totals import totals
 
 
@@ -106,6 +116,11 @@ def run(inputs: Inputs, params: StocksParams) -> Result:
     if investment is None:
         return Result(blocks, [missing_input("stocks", key)])
     sets, which, findings = _choices(investment, params)
+    if params.start.initial_stock.value == "two_benchmarks":
+        sets, which, problems = solved_rates(
+            investment, sets, which, benchmarks.get("net_stock"), params.timing, params.start.initial_stock
+        )
+        findings.extend(problems)
     covered = which >= 0
     if not covered.any():
         return Result(blocks, findings)
