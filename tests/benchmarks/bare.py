@@ -53,7 +53,7 @@ class Files:
         self.sources = folder / "sources"
         self.con = duckdb.connect(str(panel))
         self.con.execute("set enable_progress_bar = false")
-        self.con.begin()
+        self.con.execute("set memory_limit = '1GB'")
         columns = ", ".join(f"{name} varchar" for name in (*DIMS, "measure", "method", "price_basis"))
         self.con.execute(f"create table series (series_id integer, {columns})")
         self.con.execute("create table figure (series_id integer, period smallint, value double)")
@@ -102,9 +102,9 @@ class Files:
         for dim in DIMS:
             codes = axes.get(dim, ("S1",) if dim == "sector" else ("_Z",))
             at = next(places) if len(codes) > 1 else np.zeros(n, np.int32)
-            columns[dim] = pd.Categorical.from_codes(at, list(codes))
+            columns[dim] = pd.Categorical.from_codes(at, dtype=pd.CategoricalDtype(list(codes)))
         for name, text in zip(("measure", "method", "price_basis"), key.split("/"), strict=True):
-            columns[name] = pd.Categorical.from_codes(np.zeros(n, np.int8), [text])
+            columns[name] = pd.Categorical.from_codes(np.zeros(n, np.int8), dtype=pd.CategoricalDtype([text]))
         self._insert("series", pd.DataFrame(columns))
         figures = {
             "series_id": np.repeat(columns["series_id"], T),
@@ -220,7 +220,7 @@ def stocks(asset: str, flow: F8, growth: F8, start: F8) -> dict[str, tuple[F8, F
         x = np.ascontiguousarray(flow[:, :, members]).reshape(len(flow), -1)
         g, i = growth[:, members].ravel(), start[:, members].ravel()
         if rule["efficiency"] == "cohort_geometric":
-            net = geometric(x, float(rule["rate"]), g, i)
+            net = geometric(x, float(rule["rate"]), g, i)  # its age-price profile is its efficiency
             made = {"productive_stock": net, "net_stock": net}
             if rule["gross_life"]:
                 made["gross_stock"] = vintages(x, [survival(float(rule["gross_life"]))], g, i)[0]
@@ -263,7 +263,7 @@ class Sums:
 
 def capital(files: Files) -> dict[str, Any]:
     """Write investment, stocks and what leaves them; return what the cost of capital needs."""
-    A, J, T = files.areas, INDUSTRIES, files.T
+    A, J = files.areas, INDUSTRIES
     prices = files.read("prices", {"region": A, "asset": ASSETS})
     price = prices / prices[files.reference]
     year_end = np.sqrt(price * np.vstack([price[1:], (price[-1] ** 2 / price[-2])[None]]))
@@ -275,7 +275,7 @@ def capital(files: Files) -> dict[str, Any]:
         files.put(key, values, {"area": A, "industry": ("_T",), "asset": ASSETS})
     current = files.read("investment", {"region": A, "branch": J, "asset": ASSETS}, skip="status")
     sums = Sums()
-    kept: dict[str, Any] = {"base": [], "loss": [], "gain": [], "average": []}
+    kept: dict[str, list[F8]] = {"base": [], "loss": [], "gain": [], "average": []}
     for k, asset in enumerate(ASSETS):
         axes = {"area": A, "industry": J, "asset": (asset,)}
         p, pe = price[:, :, k, None], year_end[:, :, k, None]
@@ -293,8 +293,7 @@ def capital(files: Files) -> dict[str, Any]:
             files.put(f"{name}/steady_state/constant", opening[None], axes, -1)
             before = np.concatenate([opening[None], stock[:-1]])
             lost[name] = before + flow - stock
-            both = ((stock, "constant"), (stock * pe, "year_end"))
-            for values, basis in both:
+            for values, basis in ((stock, "constant"), (stock * pe, "year_end")):
                 files.put(f"{name}/perpetual_inventory/{basis}", values, axes)
                 sums.add(f"{name}/perpetual_inventory/{basis}", asset, values)
         names = {"consumption_of_fixed_capital": "net_stock", "retirements": "gross_stock"}
@@ -311,38 +310,32 @@ def capital(files: Files) -> dict[str, Any]:
         for key, values in (("asset_base/average/current", base), ("revaluation/actual/current", gain)):
             files.put(key, values, axes, 1)
             sums.add(key, asset, values)
-        for name, values in (
-            ("base", base),
-            ("gain", gain),
-            ("average", average),
-            ("loss", (lost["net_stock"] * p)[1:]),
-        ):
-            kept[name].append(values)
-    starts = {"asset_base/average/current": 1, "revaluation/actual/current": 1}
-    sums.put(files, starts)
-    whole = sums.industries["net_stock/perpetual_inventory/constant"]
-    assert len(whole) == T
-    return {**kept, "net": whole, "sums": sums}
+        kept["base"].append(base)
+        kept["gain"].append(gain)
+        kept["average"].append(average)
+        kept["loss"].append((lost["net_stock"] * p)[1:])
+    sums.put(files, {"asset_base/average/current": 1, "revaluation/actual/current": 1})
+    return {**kept, "sums": sums.industries}
 
 
 def services(files: Files, held: Mapping[str, Any], income: F8) -> F8:
     """Write rate of return, user cost and capital services; return the services index, (T - 1, A, J + 1)."""
     A, J = files.areas, INDUSTRIES
-    sums = held["sums"].industries
+    sums = held["sums"]
     base, gain = sums["asset_base/average/current"], sums["revaluation/actual/current"]
     loss = sums["consumption_of_fixed_capital/perpetual_inventory/current"][1:]
     rate = (income[1:] - (loss - gain)) / base
     files.put("rate_of_return/endogenous/_Z", rate, {"area": A, "industry": J, "asset": ("_T",)}, 1)
-    costs, totals = [], Sums()
+    costs, totals, summed = [], Sums(), "capital_compensation/sum_of_parts/current"
     for k, asset in enumerate(ASSETS):
         cost = rate * held["base"][k] + held["loss"][k] - held["gain"][k]
         axes = {"area": A, "industry": J, "asset": (asset,)}
         files.put("capital_compensation/endogenous/current", cost, axes, 1)
         files.put("user_cost/endogenous/current", cost / held["average"][k], axes, 1)
-        totals.add("capital_compensation/endogenous/current", asset, cost)
+        totals.add(summed, asset, cost)
         costs.append(cost)
-    totals.put(files, {"capital_compensation/endogenous/current": 1})
-    of_industry = totals.industries["capital_compensation/endogenous/current"]
+    totals.put(files, {summed: 1})
+    of_industry = totals.industries[summed]
     of_area = of_industry.sum(axis=2, keepdims=True)
     growth = np.zeros((files.T - 2, len(A), len(J) + 1))
     for cost, average in zip(costs, held["average"], strict=True):
@@ -352,7 +345,7 @@ def services(files: Files, held: Mapping[str, Any], income: F8) -> F8:
             added = (part[1:] + part[:-1]) / 2 * change
             growth[..., columns] += added if columns.start == 0 else added.sum(axis=2, keepdims=True)
     index = chain(growth, files.reference - 1)
-    net = with_total(held["net"])
+    net = with_total(sums["net_stock/perpetual_inventory/constant"])
     composition = index / (net / net[files.reference])[1:]
     axes = {"area": A, "industry": (*J, "_T"), "asset": ("_T",)}
     files.put("capital_services_growth/tornqvist/_Z", growth, axes, 2)
@@ -487,7 +480,6 @@ def main(folder: Path, panel: Path) -> None:
     volume = files.read("value_added_volume", {"region": A, "branch": J})
     output = delivered(files, "value_added", "constant", volume)
     growth_accounts(files, output, index, labour, hours, share)
-    files.con.commit()
     files.con.close()
 
 

@@ -169,9 +169,7 @@ def write(folder: Path, series: int, years: int) -> None:
 class _Sources:
     """The invented economy, written file by file; every array has years first."""
 
-    def __init__(
-        self, con: duckdb.DuckDBPyConnection, folder: Path, areas: list[str], years: range
-    ) -> None:
+    def __init__(self, con: duckdb.DuckDBPyConnection, folder: Path, areas: list[str], years: range) -> None:
         self.con, self.folder, self.areas, self.years = con, folder, areas, years
         self.draw = np.random.default_rng(20150101)
 
@@ -222,7 +220,7 @@ class _Sources:
         shape = [len(codes) for codes in labels.values()]
         places = np.indices(shape, np.int16).reshape(len(shape), -1)
         return {
-            name: pd.Categorical.from_codes(np.repeat(at, repeat), list(codes))
+            name: pd.Categorical.from_codes(np.repeat(at, repeat), dtype=pd.CategoricalDtype(list(codes)))
             for (name, codes), at in zip(labels.items(), places, strict=True)
         }
 
@@ -239,7 +237,9 @@ class _Sources:
         columns = self._labels(labels, T)
         columns["year"] = np.tile(np.array(self.years, np.int16), values[0].size)
         if status is not None:
-            columns["status"] = pd.Categorical.from_codes(status.reshape(T, -1).T.ravel(), ["A", "E", "P"])
+            columns["status"] = pd.Categorical.from_codes(
+                status.reshape(T, -1).T.ravel(), dtype=pd.CategoricalDtype(["A", "E", "P"])
+            )
         columns["value"] = values.reshape(T, -1).T.ravel()
         self._copy(name, pd.DataFrame(columns), {"value": digits})
 

@@ -4,7 +4,8 @@ Run: python tests/benchmarks/run.py [--series 100000] [--years 75] [--rounds 3] 
 
 For every size both sides run as processes of their own, in turn (A B A B), and what is printed are medians of the
 ratios of each round. Nothing passes or fails on time; the exit code is 1 if the two disagree on a figure. The default
-sizes need about 30 GB of disk and the better part of an hour on two cores; `--series 10000 --smaller` takes two minutes.
+sizes need 8 GB of disk and most of an hour on two cores; `--series 10000 --smaller --rounds 1` takes a minute. Memory
+is what the process had resident at most, the database's cache included.
 """
 
 import argparse
@@ -88,7 +89,9 @@ def differences(folder: Path) -> list[str]:
     for key in bare.keys() & whole.keys():
         (n, total, size), (count, other, _) = bare[key], whole[key]
         if n != count or abs(total - other) > SAME * size:
-            out.append(f"{' '.join(map(str, key))}: bare {n} figures, sum {total}; panel {count}, sum {other}")
+            out.append(
+                f"{' '.join(map(str, key))}: bare {n} figures, sum {total}; panel {count}, sum {other}"
+            )
     return sorted(out)
 
 
@@ -165,9 +168,15 @@ def main() -> int:
     parser.add_argument("--years", type=int, default=75)
     parser.add_argument("--rounds", type=int, default=3)
     parser.add_argument(
-        "--smaller", type=int, nargs="*", default=[10_000, 30_000], help="further sizes, to see how cost grows"
+        "--smaller",
+        type=int,
+        nargs="*",
+        default=[10_000, 30_000],
+        help="further sizes, to see how cost grows",
     )
-    parser.add_argument("--folder", type=Path, help="where to work; kept afterwards (default: a temporary one)")
+    parser.add_argument(
+        "--folder", type=Path, help="where to work; kept afterwards (default: a temporary one)"
+    )
     chosen = parser.parse_args()
     work = chosen.folder or Path(tempfile.mkdtemp(prefix="bench-"))
     same, per_series = True, {}
@@ -178,7 +187,9 @@ def main() -> int:
             folder.mkdir(parents=True)
             costs = measure(folder, size, chosen.years, chosen.rounds)
             same &= report(folder, size // PER_AREA * PER_AREA, costs)
-            per_series[size] = [statistics.median(pair[side].wall for pair in costs) / size for side in (0, 1)]
+            per_series[size] = [
+                statistics.median(pair[side].wall for pair in costs) / size for side in (0, 1)
+            ]
         print("\nwall time a series, relative to the largest size")
         for size, (bare, whole) in per_series.items():
             largest = per_series[max(per_series)]

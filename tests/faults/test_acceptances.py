@@ -61,7 +61,7 @@ def test_a_finding_is_named_by_its_cell_too(folder: Path) -> None:
 LAPSED = {
     "another text": ({"found": "-4"}, "the finding now says something else", "found: -3"),
     "nothing there": ({"time_period": "2012"}, "there is no such finding", "found: no finding"),
-    "another rule": ({"rule": "sign_investmnt"}, "there is no such finding", "found: no finding"),
+    "another rule": ({"rule": "sign_investment"}, "there is no such finding", "found: no finding"),
 }
 
 
@@ -69,15 +69,21 @@ LAPSED = {
 def test_an_acceptance_lapses(folder: Path, case: str) -> None:
     change, what, found = LAPSED[case]
     entries(folder, "acceptance", LOSS | change)
-    result = keelbook("assemble", folder)
-    assert result.exit_code == 0
-    assert "0 stop, 2 warn," in result.stdout
-    strict = keelbook("assemble", folder, "--strict")
+    strict = keelbook("screen", folder, "--strict")
     assert strict.exit_code == 5
     assert "acceptances.toml, line 1: [warn lapsed_acceptance]" in strict.stderr
     assert what in strict.stderr
     assert found in strict.stderr
     assert "[warn sign_income]" in strict.stderr
+
+
+def test_a_lapsed_acceptance_is_a_warning_of_the_build(folder: Path) -> None:
+    entries(folder, "acceptance", LOSS | {"rule": "sign_incme"})
+    result = keelbook("assemble", folder)
+    assert result.exit_code == 0
+    assert "0 stop, 2 warn," in result.stdout
+    stored = "select file, \"row\", measure, found from finding where rule = 'lapsed_acceptance'"
+    assert rows(folder, stored, "panel") == [("acceptances.toml", 1, "mixed_income", "no finding")]
 
 
 def test_an_acceptance_lapses_when_the_figure_changes(folder: Path) -> None:

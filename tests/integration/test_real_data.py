@@ -284,7 +284,7 @@ def test_the_firms_are_coded_and_nowhere_named(root: Path, firm_data) -> None:
     names = sorted(packaged["firm"].unique(), key=str.casefold)
     folder = root / "fixtures" / "firms"
     texts = [p.read_text(encoding="utf-8") for p in folder.rglob("*") if p.suffix in (".csv", ".md", ".toml")]
-    assert len(texts) >= 6
+    assert len(texts) >= 5
     for name in names:
         assert not any(name.casefold() in text.casefold() for text in texts)
     for code, name in zip(sorted(firm_data), names, strict=True):
@@ -294,24 +294,31 @@ def test_the_firms_are_coded_and_nowhere_named(root: Path, firm_data) -> None:
         assert stock == dict(zip(mine["year"] - 1, mine["capital"], strict=True))
 
 
-def test_the_stocks_of_the_firms_are_the_recursion_of_scipy_and_add_up(firms: Build, firm_data) -> None:
+def test_the_stocks_of_the_firms_lead_from_one_benchmark_to_the_other(firms: Build, firm_data) -> None:
     paths = []
-    for code, (flow, _) in firm_data.items():
-        key = {"measure": "net_stock", "asset": "N11", "industry": code}
-        stored = series(firms, method="perpetual_inventory", price_basis="constant", **key)
-        opening = series(firms, method="steady_state", **key)
-        d = float(
-            firms.rows(
-                "select distinct p.setting from method_used p join series s using (series_id) "
-                "where p.name = 'asset.rate' and s.measure = 'net_stock' and s.industry = ?",
-                (code,),
-            )[0][0]
+    for code, (flow, stock) in firm_data.items():
+        rate = firms.rows(
+            "select distinct p.setting from method_used p join series s using (series_id) where s.industry = ? "
+            "and p.name = 'asset.rate' and s.measure = 'net_stock' and s.method = 'perpetual_inventory'",
+            (code,),
         )
-        path, _ = lfilter(
-            [1 - d / 2], [1, d - 1], [flow[year] for year in sorted(flow)], zi=[(1 - d) * opening.iloc[0]]
+        assert len(rate) == 1
+        d = float(rate[0][0])
+        assert d == pytest.approx(RATES[code], abs=5.1e-7)
+        stored = series(
+            firms,
+            measure="net_stock",
+            method="perpetual_inventory",
+            price_basis="constant",
+            asset="N11",
+            industry=code,
         )
         assert list(stored.index) == sorted(flow)
-        np.testing.assert_allclose(stored, path, rtol=1e-12)
+        path, _ = lfilter(
+            [1 - d / 2], [1, d - 1], [flow[year] for year in sorted(flow)], zi=[(1 - d) * stock[FIRST]]
+        )
+        np.testing.assert_allclose(stored, path, rtol=1e-11)
+        assert stored.loc[LAST] == pytest.approx(stock[LAST], rel=1e-11)
         paths.append(path)
     total = series(
         firms,
@@ -321,7 +328,27 @@ def test_the_stocks_of_the_firms_are_the_recursion_of_scipy_and_add_up(firms: Bu
         asset="N11",
         industry="_T",
     )
-    np.testing.assert_allclose(total, np.sum(paths, axis=0), rtol=1e-12)
+    np.testing.assert_allclose(total, np.sum(paths, axis=0), rtol=1e-11)
+
+
+def test_a_firm_without_a_rate_has_no_stock_and_the_note_says_why(copy_fixture, tmp_path: Path) -> None:
+    folder = copy_fixture("firms", tmp_path / "firms")
+    path = folder / "sources" / "capital.csv"
+    lines = path.read_text(encoding="utf-8").splitlines()
+    kept = [line for line in lines if not (line.startswith("F06,") and int(line.split(",")[2]) > 1944)]
+    assert len(lines) - len(kept) == 9
+    path.write_text("\n".join(kept) + "\n", encoding="utf-8")
+    with Build(assemble(folder).folder) as build:
+        rows = build.rows(
+            "select distinct industry, severity, message from finding where rule = 'no_rate_between_benchmarks'"
+        )
+        assert [row[:2] for row in rows] == [("F06", "note")]
+        assert rows[0][2].startswith("not computed: no rate in (0,1)")
+        with_stock = build.rows(
+            "select distinct industry from series where measure = 'net_stock' and asset = 'N11' "
+            "and method = 'perpetual_inventory' and industry <> '_T' order by 1"
+        )
+    assert with_stock == [(code,) for code in sorted(RATES) if code != "F06"]
 
 
 def test_the_published_stocks_of_the_firms_stand_beside(firms: Build, firm_data) -> None:

@@ -5,12 +5,10 @@ from collections.abc import Callable
 from pathlib import Path
 
 import pytest
+from small_blocks import HIDDEN_RAW, HIDDEN_YEAR
 
 from keelbook.assembly.new import write_new
 from keelbook.assembly.run import assemble
-
-HIDDEN_RAW, HIDDEN_YEAR = "123.4567", 2010
-"""The one confidential figure of `hidden_build`: investment of industry C in asset N11O."""
 
 
 @pytest.fixture(scope="session")

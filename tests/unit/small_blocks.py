@@ -25,6 +25,9 @@ TABLE = CodeTable(
 
 REFERENCE_YEAR = 2011
 
+HIDDEN_RAW, HIDDEN_YEAR = "123.4567", 2010
+"""The one confidential figure of the fixture `hidden_build`: investment of industry C in asset N11O."""
+
 
 def codes(series: str) -> dict[str, str]:
     """Return the five codes of a text such as "industry=A asset=N112"; what is left out does not vary."""

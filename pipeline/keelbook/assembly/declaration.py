@@ -12,6 +12,8 @@ from pydantic_core import PydanticCustomError
 from keelbook.contracts.assets import load_asset_rules
 from keelbook.contracts.codes import DIMS, CodeLists, load_code_lists
 from keelbook.contracts.judgements import (
+    ACCEPTANCES,
+    CORRECTIONS,
     Acceptance,
     Correction,
     Entry,
@@ -30,7 +32,7 @@ from keelbook.contracts.parameters import (
     set_by,
 )
 from keelbook.contracts.screening_rules import load_screening_rules
-from keelbook.errors import DeclarationError, Problem, did_you_mean
+from keelbook.errors import DeclarationError, Problem, did_you_mean, nearest
 
 NAME = "assembly.toml"
 
@@ -651,10 +653,10 @@ def _sheets(sources: Iterable[Source]) -> dict[str, SourceSheet]:
 
 
 def _stray_rules(folder: Path) -> list[Problem]:
-    """A rule file that no loader reads would change nothing, silently."""
+    """A file that no loader reads would change nothing, silently."""
     valid = [f"{file}.toml" for file in declared_parameters()] + ["screening.toml", "assets.csv", "codes"]
     rules = folder / "rules"
-    return [
+    found = [
         Problem(
             "not a rule file",
             str(path),
@@ -664,6 +666,21 @@ def _stray_rules(folder: Path) -> list[Problem]:
         )
         for path in (sorted(rules.iterdir()) if rules.is_dir() else ())
         if path.name not in valid
+    ]
+    meant = {
+        path: nearest(path.stem, (Path(CORRECTIONS).stem, Path(ACCEPTANCES).stem), 1)
+        for path in folder.glob("*.toml")
+    }
+    return found + [
+        Problem(
+            "a file that is not read",
+            str(path),
+            found=path.name,
+            expected=f"{stems[0]}.toml",
+            remedy="rename the file, or remove it",
+        )
+        for path, stems in sorted(meant.items())
+        if stems and path.name not in (NAME, CORRECTIONS, ACCEPTANCES)
     ]
 
 

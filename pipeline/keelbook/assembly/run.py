@@ -5,7 +5,7 @@ import os
 import socket
 import time
 from collections.abc import Callable, Sequence
-from dataclasses import dataclass, replace
+from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
 
@@ -116,16 +116,15 @@ def assemble(
             append(evidence, tables["correction"], taken.corrections)
             found = [taken.findings, _screened(evidence, assembly, taken)]
             log.step("screened", findings=len(found[0]) + len(found[1]))
-            # What the acceptances of later findings are about is not known yet.
-            judged, _ = _accepted(assembly, findings.concat(found))
+            judged = _judged(assembly, findings.concat(found), screening_only=True)
             _stop_if_refused(judged, strict, evidence, tables, work, target, log)
             panel_file = open_new(work / generations.PANEL)
             writer = Writer(
                 panel_file, evidence, tables, assembly.lists, load_measures(), _currencies(assembly)
             )
             rows = _build(assembly, taken, writer, evidence, tables, found, log)
-            everything = findings.concat(_accepted(assembly, findings.concat(found)))
-            _stop_if_refused(everything, strict, evidence, tables, work, target, log)
+            everything = _judged(assembly, findings.concat(found))
+            _stop_if_refused(everything, strict, evidence, tables, work, target, log, panel_file)
             stage_rows = pd.DataFrame(rows, columns=list(tables["stage_run"].column)).astype(
                 {"stage": "str", "note": "str"}
             )
@@ -146,10 +145,7 @@ def assemble(
 def screen_only(
     folder: Path, *, narrate: Callable[[str], None] = lambda _: None
 ) -> tuple[Assembly, Intake, pd.DataFrame]:
-    """Read and screen the sources of an assembly without writing anything.
-
-    Of the acceptances, those of screening rules are judged: what the stages will find is not known.
-    """
+    """Read and screen the sources of an assembly without writing anything."""
     assembly = load_assembly(folder)
     paths = source_paths(assembly)
     with duckdb.connect() as con:
@@ -159,9 +155,7 @@ def screen_only(
         con.execute("set enable_progress_bar = false")
         taken = take_in(con, assembly, assembly.lists, load_measures(), progress=narrate)
         found = findings.concat([taken.findings, _screened(con, assembly, taken)])
-        rules = {rule.id for rule in load_screening_rules(folder)}
-        entries = tuple(entry for entry in assembly.acceptances if entry.said.rule in rules)
-        found = findings.concat(_accepted(replace(assembly, acceptances=entries), found))
+        found = _judged(assembly, found, screening_only=True)
     del paths
     return assembly, taken, found
 
@@ -177,10 +171,18 @@ def _unchanged(assembly: Assembly, identity: Identity, now: Path, log: Log, stri
     return Report(assembly, identity, now, True, found, pd.DataFrame(), stages, log.seconds)
 
 
-def _accepted(assembly: Assembly, found: pd.DataFrame) -> tuple[pd.DataFrame, pd.DataFrame]:
-    """Return the findings with the accepted ones marked, and the acceptances that no longer hold."""
-    acceptable = [rule.id for rule in load_screening_rules(assembly.folder) if rule.acceptable]
-    return accept(found, assembly.acceptances, assembly.sheets(), acceptable)
+def _judged(assembly: Assembly, found: pd.DataFrame, *, screening_only: bool = False) -> pd.DataFrame:
+    """Return the findings with the accepted ones marked, and one for each acceptance that no longer holds.
+
+    With `screening_only`, acceptances of what later stages may find are left aside.
+    """
+    rules = load_screening_rules(assembly.folder)
+    entries = assembly.acceptances
+    if screening_only:
+        known = {rule.id for rule in rules} | set(found["rule"])
+        entries = tuple(entry for entry in entries if entry.said.rule in known)
+    acceptable = {rule.id for rule in rules if rule.acceptable}
+    return findings.concat(accept(found, entries, assembly.sheets(), acceptable))
 
 
 def _screened(con: duckdb.DuckDBPyConnection, assembly: Assembly, taken: Intake) -> pd.DataFrame:
@@ -326,11 +328,14 @@ def _stop_if_refused(
     work: Path,
     out: Path,
     log: Log,
+    panel_file: duckdb.DuckDBPyConnection | None = None,
 ) -> None:
     if not len(_refused(found, strict)):
         return
     append(evidence, tables["finding"], _numbered(found))
     evidence.close()
+    if panel_file is not None:
+        panel_file.close()
     log.say("refused", findings=len(found))
     (work / generations.LOG).write_text("\n".join(log.lines) + "\n", encoding="utf-8")
     generations.refuse(work, out)

@@ -172,6 +172,11 @@ class Build:
         positions = [column[number] for number in series_ids]
         return out[:, positions]
 
+    def is_withheld(self, series_id: int, year: int) -> bool:
+        """Return whether the panel holds a figure without its value because it is confidential."""
+        sql = "select count(*) from figure where series_id = ? and period = ? and conf_status > 0"
+        return bool(self.rows(sql, (series_id, year))[0][0])
+
     def edge(self, series_id: int, role: str) -> tuple[int, int | None] | None:
         """Return the number of the series that one role of a series reads, and the year if it is a fixed one."""
         sql = "select input_series_id, input_period from edge where series_id = ? and role = ? and period is null"

@@ -135,6 +135,16 @@ def trace(build: Build, series: Series, year: int) -> Traced:
     row = year - build.periods.start
     values = build.values([series.series_id])[:, 0]
     if not 0 <= row < len(values) or np.isnan(values[row]):
+        if build.is_withheld(series.series_id, year):
+            raise DeclarationError(
+                Problem(
+                    f"{series.label} is withheld in {year}: it rests on a confidential figure",
+                    str(build.path),
+                    found="no evidence file beside the panel",
+                    expected="evidence.duckdb of the same build",
+                    remedy="trace in the build folder, if you may see confidential figures",
+                )
+            )
         there = [build.periods[i] for i in np.flatnonzero(np.isfinite(values))]
         raise DeclarationError(
             Problem(

@@ -4,7 +4,7 @@ from pathlib import Path
 
 import click
 
-from keelbook.cli.common import as_json, dump, narrator, reports_errors
+from keelbook.cli.common import as_json, dump, end_of_steps, narrator, reports_errors
 
 
 @click.command()
@@ -12,14 +12,17 @@ from keelbook.cli.common import as_json, dump, narrator, reports_errors
 @click.option("--out", type=click.Path(path_type=Path), help="Build folder (FOLDER/build if not given).")
 @click.option("--strict", is_flag=True, help="Treat a warn finding like a stop.")
 @click.option("--quiet", is_flag=True, help="Do not tell the steps on standard error.")
+@click.option("--log-json", is_flag=True, help="Tell the steps as JSON lines on standard error.")
 @as_json
 @reports_errors
-def assemble(folder: Path, out: Path | None, strict: bool, quiet: bool, json_: bool) -> None:
+def assemble(folder: Path, out: Path | None, strict: bool, quiet: bool, log_json: bool, json_: bool) -> None:
     """Build the assembly in FOLDER and publish the result, all or nothing."""
     from keelbook.assembly.run import assemble as run
     from keelbook.outputs.summary import summary
 
-    report = run(folder, out, strict=strict, narrate=narrator(quiet or json_))
+    quiet = quiet or json_
+    report = run(folder, out, strict=strict, narrate=narrator(quiet, log_json))
+    end_of_steps(quiet, log_json)
     if json_:
         dump(
             {

@@ -4,6 +4,7 @@ import functools
 import json
 import os
 import sys
+import time
 from collections.abc import Callable
 from typing import Any, ParamSpec, TypeVar
 
@@ -32,6 +33,7 @@ def reports_errors(function: Callable[P, R]) -> Callable[P, R]:
             if kwargs.get("json_"):
                 problems = [vars(problem) for problem in error.problems]
                 click.echo(json.dumps({"error": type(error).__name__, "problems": problems}, indent=2))
+            end_of_steps(quiet=False)
             for problem in error.problems[:SHOWN]:
                 click.echo(_printable(str(problem)), err=True)
             if len(error.problems) > SHOWN:
@@ -60,14 +62,29 @@ def _printable(text: str) -> str:
     return "".join(c if c.isprintable() or c == "\n" else c.encode("unicode_escape").decode() for c in text)
 
 
-def narrator(quiet: bool) -> Callable[[str], None]:
-    """Return a function that tells the steps of a run on standard error."""
+def narrator(quiet: bool, log_json: bool = False) -> Callable[[str], None]:
+    """Return a function that tells the steps of a run on standard error.
+
+    On a terminal one line is written over; elsewhere every step is a line; as JSON with its time on request.
+    """
+    terminal = sys.stderr.isatty()
 
     def say(text: str) -> None:
-        if not quiet:
+        if log_json:
+            stamp = time.strftime("%Y-%m-%dT%H:%M:%SZ", time.gmtime())
+            click.echo(json.dumps({"time": stamp, "step": text}), err=True)
+        elif terminal and not quiet:
+            click.echo(f"\r\033[K{text}", nl=False, err=True)
+        elif not quiet:
             click.echo(text, err=True)
 
     return say
+
+
+def end_of_steps(quiet: bool, log_json: bool = False) -> None:
+    """Clear the line of steps on a terminal, before results are printed."""
+    if sys.stderr.isatty() and not quiet and not log_json:
+        click.echo("\r\033[K", nl=False, err=True)
 
 
 def dump(value: Any) -> None:

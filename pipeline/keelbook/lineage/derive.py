@@ -32,6 +32,7 @@ from keelbook.blocks import (
     SeriesIndex,
 )
 from keelbook.lineage.formula import Formula, Role, Setting, values_of
+from keelbook.lineage.lag import Lag
 from keelbook.lineage.primitives import Either, Groups, Rule, Span
 
 
@@ -305,6 +306,8 @@ def _confidentiality(
         elif formula.kind == "series":
             if isinstance(rule, Span):
                 whole = np.maximum(whole, _reached(conf, rule, x[0]))
+            elif not isinstance(rule, Lag):
+                whole = np.broadcast_to(whole.max(axis=0), whole.shape)
             whole = np.maximum.accumulate(whole, axis=0)
         out = np.maximum(out, whole)
     return out

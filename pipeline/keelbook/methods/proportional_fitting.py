@@ -62,10 +62,10 @@ def fit(seed: F8, row_totals: F8, column_totals: F8, *, tolerance: float, rounds
             scale = r[r > 0].mean()
             r, s = r / scale, s * scale
             return Fitted(r[:, None] * seed * s, r, s, done, residual)
+    worst = f"{_worst('row', row_miss)}; {_worst('column', column_miss)}"
     raise ValueError(
-        f"no convergence in {rounds} rounds: sums miss their totals by up to {residual:.3g} of the grand "
-        f"total ({_worst('row', row_miss)}; {_worst('column', column_miss)}); allow more rounds, or see whether the zeros of the seed leave any "
-        "table with these totals"
+        f"no convergence in {rounds} rounds: sums miss their totals by up to {residual:.3g} of the grand total "
+        f"({worst}); allow more rounds, or see whether the zeros of the seed leave any table with these totals"
     )
 
 

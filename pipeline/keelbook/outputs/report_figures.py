@@ -82,6 +82,17 @@ class Place:
         named = [message for message, measure in rows if measure in measures]
         return (named or [message for message, _ in rows])[:5]
 
+    def not_ready(self) -> list[str]:
+        """Return why there is no decomposition: what its input lacks, else why that was not computed."""
+        rows = self.panel.rows(
+            "select reason, min(time_period), max(time_period) from decomposition_input "
+            "where not ready and area = ? and sector = ? group by reason order by count(*) desc, reason limit 5",
+            (self.area, self.sector),
+        )
+        if not rows:
+            return self.reasons("value_added", "labour_input", "capital_services")
+        return [f"decomposition: {reason} ({first}–{last})" for reason, first, last in rows]
+
 
 def section(panel: Panel, area: str, sector: str, number: int) -> Section:
     """Return the section of one area and sector of a panel."""
@@ -224,9 +235,7 @@ def growth(place: Place) -> Figure:
     lead = "Growth of output and what capital, labour and the residual contributed to it."
     draft = Figure(f"{place.id}-growth", "Growth and its sources", lead)
     if not industries:
-        return replace(
-            draft, absent=place.reasons(*measures, "value_added", "labour_input", "capital_services")
-        )
+        return replace(draft, absent=place.not_ready())
     years, kept = _trimmed(place.panel.years, list(by_key.values()))
     by_key = dict(zip(by_key, kept, strict=True))
     unit = "% a year, log form" if by_key[OUTPUT, industries[0]].method == "log" else "% a year"
@@ -296,7 +305,7 @@ def residual(place: Place) -> Figure:
     lead = "Level of the residual (output not accounted for by capital and labour), first year = 1."
     draft = Figure(f"{place.id}-residual", "Level of the residual", lead)
     if not found:
-        return replace(draft, absent=place.reasons("residual_level", "value_added", "labour_input"))
+        return replace(draft, absent=place.not_ready())
     years, found = _trimmed(place.panel.years, found)
     groups = _by_industry(found)
     total = [s for s in found if s.industry == "_T"]

@@ -44,8 +44,9 @@ def summary(report: Report, place: Path) -> list[str]:
     for row in report.stages.to_dict("records"):
         if row["stage"] in WORDS and row["figures"]:
             lines.append(f"{'Built':<10} {row['figures']:>11,} figures  {WORDS[str(row['stage'])]}")
-    not_built = [WORDS[s] for s in WORDS if not _figures(report.stages, s)]
-    lines += [f"Not built  {text}" for text in not_built]
+    lines += [
+        f"Not built  {WORDS[s]}: {_why(report.findings, s)}" for s in WORDS if not _figures(report.stages, s)
+    ]
     lines += _findings(report.findings)
     lines += _growth(report)
     lines += [
@@ -59,6 +60,13 @@ def summary(report: Report, place: Path) -> list[str]:
 
 def _figures(stages: pd.DataFrame, name: str) -> int:
     return int(stages.loc[stages["stage"] == name, "figures"].sum())
+
+
+def _why(found: pd.DataFrame, stage: str) -> str:
+    """Return why a stage gave nothing, in the words of its notes."""
+    mine = found[(found["rule"] == "not_computed") & found["message"].str.startswith(f"{stage}: ")]
+    reasons = dict.fromkeys(message.rsplit(", ", 1)[-1] for message in mine["message"])
+    return " and ".join(reasons) or "nothing to compute it from"
 
 
 def _findings(found: pd.DataFrame) -> list[str]:

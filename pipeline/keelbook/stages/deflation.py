@@ -12,7 +12,7 @@ from keelbook.lineage.formula import Formula, Role
 from keelbook.lineage.primitives import Each, Either
 from keelbook.methods.valuation import year_end_price, year_end_price_extrapolated
 from keelbook.stages.base import CHOSEN, Inputs, Result, Stage, keys, missing_input, note
-from keelbook.stages.totals import TOTAL
+from keelbook.stages.totals import TOTAL, totals
 
 DEFLATED = Formula(
     name="deflated",
@@ -104,7 +104,8 @@ def run(inputs: Inputs, params: DeflationParams) -> Result:
     if delivered is not None:
         volume = volume.take(delivered.series.locate(volume.series.key) < 0)
     findings.extend(_missing_years(current, volume))
-    return Result((volume.take(volume.held), year_end), findings)
+    volume = volume.take(volume.held)
+    return Result((volume, *totals(volume, ("sector", "industry", "asset")), year_end), findings)
 
 
 def _no_price(block: Block, n: int) -> dict[str, Any]:

@@ -67,10 +67,11 @@ def decomposition_of(book: Book) -> pd.DataFrame:
     """Return `decomposition`: growth, contributions, residual, level and readings, a row per form and year."""
     frames = []
     for form in decomposition.FORMS:
-        level = book.get(BlockKey("residual_level", form, "_Z"))
-        if level is None:
+        level, residual = (book.get(BlockKey(m, form, "_Z")) for m in ("residual_level", "residual_growth"))
+        if level is None or residual is None:
             continue
-        shown = np.isfinite(level.value)
+        # After a gap there is growth again, and no level any more.
+        shown = np.isfinite(level.value) | np.isfinite(residual.value)
         frame = _labelled(level.series, level.periods, shown)
         frame["form"] = pd.Series([form] * len(frame), dtype="str")
         share = _values(book.get(_share_key(form)), level.series, {}, len(level.periods))

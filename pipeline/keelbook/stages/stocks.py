@@ -1,16 +1,16 @@
 """Stocks: gross, productive and net capital stocks by the perpetual inventory, and what leaves them."""
 
-from collections.abc import Callable, Mapping
+from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass
 from typing import Any
 
 import numpy as np
 
-from keelbook.blocks import Block, BlockKey, Choice, MethodSet
+from keelbook.blocks import B1, Block, BlockKey, Choice, MethodSet
 from keelbook.lineage.derive import derive, given
 from keelbook.lineage.formula import Formula, Role
 from keelbook.lineage.primitives import Each
-from keelbook.stages.base import CHOSEN, Inputs, Result, Stage, keys, missing_input, note
+from keelbook.stages.base import CHOSEN, Book, Inputs, Result, Stage, keys, missing_input, note
 from keelbook.stages.deflation import by_edges, price_edges
 from keelbook.stages.starting_stock import FORMULAS as STARTING
 from keelbook.stages.starting_stock import (
@@ -107,6 +107,9 @@ class StocksParams:
 DIMENSIONS = ("sector", "industry", "asset")
 """Dimensions over which totals of stocks and losses are made."""
 
+OF_ALL = "sum_of_parts"
+"""Method of a total over series of several methods."""
+
 
 def run(inputs: Inputs, params: StocksParams) -> Result:
     """Return the stocks and losses of every investment series with an asset rule, and their totals."""
@@ -114,7 +117,8 @@ def run(inputs: Inputs, params: StocksParams) -> Result:
     key = BlockKey("investment", CHOSEN, "constant")
     investment = inputs.get(key)
     if investment is None:
-        return Result(blocks, [missing_input("stocks", key)])
+        return Result([*blocks, *_totals(inputs, blocks)], [missing_input("stocks", key)])
+    investment = investment.take(investment.part)
     sets, which, findings = _choices(investment, params)
     if params.start.initial_stock.value == "two_benchmarks":
         sets, which, problems = solved_rates(
@@ -123,7 +127,7 @@ def run(inputs: Inputs, params: StocksParams) -> Result:
         findings.extend(problems)
     covered = which >= 0
     if not covered.any():
-        return Result(blocks, findings)
+        return Result([*blocks, *_totals(inputs, blocks)], findings)
     investment, which = investment.take(covered), which[covered]
     begin = start(investment, sets, which, benchmarks, params.start)
     findings.extend(begin.findings)
@@ -151,10 +155,26 @@ def run(inputs: Inputs, params: StocksParams) -> Result:
     findings.extend(_broken_off(investment, made["net_stock"]))
     valued, problems = _valued(inputs, made, params)
     findings.extend(problems)
-    for block in (*made.values(), *valued):
-        blocks.append(block)
-        blocks.extend(totals(block, DIMENSIONS))
-    return Result(blocks, findings)
+    blocks.extend((*made.values(), *valued))
+    return Result([*blocks, *_totals(inputs, blocks)], findings)
+
+
+def _totals(inputs: Inputs, blocks: Sequence[Block]) -> list[Block]:
+    """Return the totals of stocks and losses, over computed and delivered series together."""
+    out = []
+    for measure in (*STOCKS, *LOSSES):
+        for basis in ("constant", "year_end", "current"):
+            forms = [b for b in blocks if (b.key.measure, b.key.price_basis) == (measure, basis)]
+            if measure in STOCKS and basis != "current":
+                delivered = inputs.get(BlockKey(measure, "delivered", basis))
+                forms += [] if delivered is None else [delivered]
+            forms = [b for b in forms if b.chosen.any()]
+            if len(forms) == 1 and forms[0].chosen.all():
+                out.extend(totals(forms[0], DIMENSIONS))
+            elif forms:
+                whole = Book(forms).get(BlockKey(measure, CHOSEN, basis))
+                out.extend(totals(whole, DIMENSIONS, OF_ALL) if whole is not None else [])
+    return out
 
 
 def _delivered(inputs: Inputs, params: StocksParams) -> tuple[list[Block], dict[str, Block]]:
@@ -184,8 +204,8 @@ def _delivered(inputs: Inputs, params: StocksParams) -> tuple[list[Block], dict[
         if block is not None:
             at_reference[measure] = block
     net = at_reference.get("net_stock")
-    if net is not None and net.chosen.any():
-        alone = net.take(net.chosen)
+    alone = None if net is None else net.take(net.chosen & _lasting(net, params))
+    if alone is not None and len(alone.series):
         blocks.append(
             derive(
                 AS_NET_STOCK,
@@ -197,6 +217,13 @@ def _delivered(inputs: Inputs, params: StocksParams) -> tuple[list[Block], dict[
             )
         )
     return blocks, at_reference
+
+
+def _lasting(net: Block, params: StocksParams) -> B1:
+    """Return which series are of assets that no rule gives a life or a rate: they do not wear out."""
+    codes = net.series.table.codes
+    pairs = zip(net.series.digit("asset"), net.series.digit("industry"), strict=True)
+    return np.array([params.assets(codes["asset"][a], codes["industry"][j]) is None for a, j in pairs], bool)
 
 
 def _choices(
@@ -334,12 +361,22 @@ STAGE = Stage(
     gives=keys(
         "productive_stock/as_net_stock/constant",
         "benchmark_factor/benchmark/_Z",
-        *(f"{m}/{method}/constant" for m in STOCKS for method in ("benchmark", "at_reference_prices")),
+        *(
+            f"{m}/{method}/constant"
+            for m in STOCKS
+            for method in ("benchmark", "at_reference_prices", "sum_of_parts")
+        ),
         "trend_growth/log_linear_trend/_Z",
         "trend_investment/log_linear_trend/constant",
         *(f"{m}/steady_state/constant" for m in STOCKS),
         *(f"{m}/perpetual_inventory/constant" for m in (*STOCKS, *LOSSES)),
         *(f"{m}/perpetual_inventory/year_end" for m in STOCKS),
+        *(
+            f"{m}/{method}/{b}"
+            for m in STOCKS
+            for method in ("delivered", OF_ALL)
+            for b in ("constant", "year_end")
+        ),
         *(f"{m}/perpetual_inventory/current" for m in LOSSES),
     ),
     scope="area",

@@ -87,7 +87,8 @@ class Writer:
             withheld = figures.loc[hidden, ["series_id", "period", "value"]]
             append(self._evidence, self._tables["withheld_figure"], withheld, self._lists)
             figures = figures.copy()
-            figures.loc[hidden, "value"] = np.nan
+            # What is left of a known opening, over its assumed part, would be the stock.
+            figures.loc[hidden, ["value", "imputed_part", "assumed_part"]] = np.nan
             figures.loc[hidden, "obs_status"] = np.int8(self._suppressed)
         self.insert("figure", figures)
 

@@ -341,6 +341,15 @@ def test_everything_wrong_in_every_file_at_once(tmp_path: Path) -> None:
     }
 
 
+def test_corrections_and_acceptances_are_checked_with_all_else(tmp_path: Path) -> None:
+    (tmp_path / "corrections.toml").write_text("[[corection]]\n", encoding="utf-8")
+    (tmp_path / "acceptances.toml").write_text("[[acceptance]]\nrule = 1\n", encoding="utf-8")
+    (tmp_path / "acceptance.toml").write_text("", encoding="utf-8")
+    (tmp_path / "notes.toml").write_text("", encoding="utf-8")
+    named = {Path(problem.file).name for problem in refused(tmp_path, CSV_LONG)}
+    assert named == {"corrections.toml", "acceptances.toml", "acceptance.toml"}
+
+
 def test_the_demo_is_declared_without_fault() -> None:
     demo = Path(__file__).parents[3] / "fixtures" / "demo"
     assembly = load_assembly(demo)

@@ -5,7 +5,7 @@ from pathlib import Path
 import pytest
 
 from keelbook.contracts.measures import load_measures
-from keelbook.contracts.screening_rules import Coverage, Identity, Sign, load_screening_rules
+from keelbook.contracts.screening_rules import KINDS, Coverage, Identity, Sign, load_screening_rules
 from keelbook.errors import DeclarationError, Problem
 
 OWN = """\
@@ -164,6 +164,46 @@ def test_an_id_twice(tmp_path: Path) -> None:
     (problem,) = refused(tmp_path, OWN + OWN)
     assert (problem.place, problem.found) == ("line 12", "own")
     assert "the first is on line 2" in problem.expected
+
+
+@pytest.mark.parametrize("rule_id", ["duplicate_key", "unknown_code"])
+def test_nobody_accepts_data_of_which_it_is_not_known_what_they_say(tmp_path: Path, rule_id: str) -> None:
+    text = f'[[rule]]\nid = "{rule_id}"\ncitation = "test"\nacceptable = true\n'
+    (problem,) = refused(tmp_path, text)
+    assert (problem.place, problem.what) == ("line 4", "a finding of this rule cannot be accepted")
+
+
+def test_stops_are_acceptable_by_declaration_only(tmp_path: Path) -> None:
+    assert {rule.id for rule in load_screening_rules() if rule.acceptable} == {"income_identity"}
+    text = '[[rule]]\nid = "sign"\ncitation = "accounts unit, 2024"\nacceptable = true\n'
+    assert {rule.id for rule in load_screening_rules(assembly(tmp_path, text)) if rule.acceptable} == {
+        "income_identity",
+        "sign",
+    }
+
+
+def test_there_are_rules_of_every_kind_each_with_a_reason_a_remedy_and_a_citation() -> None:
+    rules = load_screening_rules()
+    assert {rule.kind for rule in rules} == set(KINDS)
+    assert all(rule.reason and rule.remedy and rule.citation for rule in rules)
+
+
+@pytest.mark.parametrize(
+    ("rule_id", "change", "what"),
+    [
+        ("growth_jump", "threshold = 0", "'threshold' is not as it must be"),
+        ("growth_jump", "minimum_years = 2", "'minimum_years' is not as it must be"),
+        ("growth_jump", "measures = []", "an empty list"),
+        ("parts_asset", 'dimension = "area"', "'dimension' is not as it must be"),
+        ("parts_asset", 'price_bases = ["curent"]', "'price_bases.0' is not as it must be"),
+        ("price_volume", 'price = "investment_prices"', "unknown measure 'investment_prices'"),
+        ("unit_magnitude", "minimum_series = 1", "'minimum_series' is not as it must be"),
+        ("decomposition_inputs", "instead = {net_stock = []}", "'net_stock' is not one of the measures"),
+    ],
+)
+def test_a_parameter_out_of_bounds(tmp_path: Path, rule_id: str, change: str, what: str) -> None:
+    (problem,) = refused(tmp_path, f'[[rule]]\nid = "{rule_id}"\ncitation = "test"\n{change}\n')
+    assert (problem.place, problem.what) == ("line 4", what)
 
 
 def test_a_change_needs_a_citation_and_keeps_the_kind(tmp_path: Path) -> None:

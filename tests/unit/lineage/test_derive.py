@@ -5,6 +5,7 @@ import pytest
 from small_blocks import block, choice, column, index, number
 
 from keelbook.blocks import ESTIMATED, NO_FIGURE, NORMAL, PROVISIONAL, BlockKey, Edges
+from keelbook.lineage.benchmark import BenchmarkFactor
 from keelbook.lineage.derive import Given, derive, given, in_year
 from keelbook.lineage.formula import Formula, Role, Setting
 from keelbook.lineage.lag import GeometricKernel, Lag
@@ -247,6 +248,26 @@ def test_a_span_that_reaches_a_later_hidden_figure_is_hidden():
     out = _derive(trend, flow, {"x": given(flow)})
     assert column(out, "industry=A", "conf")[0] > 0
     assert column(out, "industry=C", "conf")[0] == 0
+
+
+def test_a_factor_solved_from_later_hidden_figures_is_hidden():
+    """It is booked before the first year; with a known benchmark it would give the hidden flow away."""
+    lag = Lag((GeometricKernel(1.0, 0.9, 0.9, 1.0),), np.zeros(1, np.int32))
+    factor = _formula(
+        (Role("benchmark"), Role("flow"), Role("opening"), Role("growth", counted=False)),
+        lambda s: BenchmarkFactor(lag),
+        "series",
+    )
+    flow = block("x/a/_Z", {"industry=A": [NAN, 2.0, 3]}, conf={"industry=A": [0, 0, 2]})
+    sources = {
+        "benchmark": given(block("b/a/_Z", {"industry=A": [NAN, NAN, 50.0]})),
+        "flow": given(flow),
+        "opening": given(block("o/a/_Z", {"industry=A": [50.0, NAN, NAN]})),
+        "growth": given(block("g/a/_Z", {"industry=A": [0.0, NAN, NAN]})),
+    }
+    out = _derive(factor, flow, sources)
+    np.testing.assert_allclose(out.value[0, 0], (50 - 3 - 0.9 * 2) / (0.81 * 50), rtol=1e-13)
+    assert out.conf[0, 0] > 0
 
 
 # --- data basis -----------------------------------------------------------------------------------------------

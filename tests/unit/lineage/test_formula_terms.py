@@ -91,6 +91,17 @@ def _vintages(rng: np.random.Generator, roles: int) -> Arrays:
     return [flow, 10 * opening, growth]
 
 
+def _benchmark(rng: np.random.Generator, roles: int) -> Arrays:
+    """A benchmark some years after the opening; one of the opening's own date; one that is not there."""
+    flow, opening, growth = _vintages(rng, 3)
+    flow = np.abs(flow)
+    benchmark = np.full((T, N), np.nan)
+    for n in range(N):
+        benchmark[n % 4 + n % 3, n] = rng.uniform(500, 900)
+    benchmark[:, 7] = np.nan
+    return [benchmark, flow, opening, growth]
+
+
 def _growth(rng: np.random.Generator, roles: int) -> Arrays:
     x = rng.normal(0.02, 0.05, (T, N))
     for n in range(N):
@@ -157,6 +168,8 @@ LINEAR = Case(_positive, linear=True)
 OF_SHARES = Case(_shares)
 VINTAGES = Case(_vintages, ASSETS, linear=True)
 OPENING = Case(_start, ASSETS)
+BENCHMARK = Case(_benchmark, ASSETS, linear=True)
+TORNQVIST = Case(_stocks_and_costs, linear=True, members=MEMBERS)
 
 CASES: dict[str, tuple[Case, ...]] = {
     "scaled": (Case(_positive, UNITS, linear=True),),
@@ -178,6 +191,22 @@ CASES: dict[str, tuple[Case, ...]] = {
     "net_stock_of_vintages": (VINTAGES,),
     "consumption_of_fixed_capital_of_vintages": (VINTAGES,),
     "retirements_of_vintages": (VINTAGES,),
+    "benchmark_factor_gross_stock": (BENCHMARK,),
+    "benchmark_factor_productive_stock": (BENCHMARK,),
+    "benchmark_factor_net_stock": (BENCHMARK,),
+    "opening_from_benchmark": (PLAIN,),
+    "productive_as_net_stock": (LINEAR,),
+    "at_reference_prices": (PLAIN,),
+    "hours_of_groups": (LINEAR,),
+    "labour_input_growth": (TORNQVIST,),
+    "labour_input_chained": (Case(_growth, ({"assembly.reference_year": REFERENCE_YEAR},)),),
+    "labour_composition": (PLAIN,),
+    "labour_input_from_composition": (PLAIN,),
+    "exogenous_rate_of_return": (
+        Case(_positive, ({"services.real_rate": 0.04}, {"services.real_rate": 0.0})),
+    ),
+    "unallocated_income": (LINEAR,),
+    "capital_compensation_without_wear": (PLAIN,),
     "at_current_prices": (PLAIN,),
     "at_replacement_cost": (PLAIN,),
     "hours_index": (PLAIN,),
@@ -202,7 +231,7 @@ CASES: dict[str, tuple[Case, ...]] = {
     "capital_compensation": (PLAIN,),
     "average_productive_stock": (LINEAR,),
     "unit_user_cost": (PLAIN,),
-    "capital_services_growth": (Case(_stocks_and_costs, linear=True, members=MEMBERS),),
+    "capital_services_growth": (TORNQVIST,),
     "capital_services_chained": (Case(_growth, ({"assembly.reference_year": REFERENCE_YEAR},)),),
     "capital_composition": (PLAIN,),
     "two_period_mean": (Case(_shares, linear=True),),

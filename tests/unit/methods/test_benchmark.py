@@ -31,7 +31,7 @@ def test_closing_stock_and_the_rate_behind_it(timing, expected):
 def test_stocks_that_no_rate_joins():
     """More than was there and invested, less than the last investment leaves, and nothing known."""
     opening, investment = np.array([100.0, 100, 100, 0]), np.array([[10.0, 10, np.nan, 0]])
-    solved = rate_between(opening, np.array([111.0, 4, 50, 0]), investment, "mid")
+    solved = rate_between(opening, np.array([111.0, 4.5, 50, 0]), investment, "mid")
     assert np.isnan(solved.rate).all()
     assert np.isnan(solved.residual).all()
     assert solved.roots.tolist() == [0, 0, 0, 0]

@@ -75,9 +75,9 @@ def test_opening_form_is_the_textbook_user_cost_for_geometric_decline():
 
 def test_rates_and_prices_by_hand():
     assert exogenous_rate(np.array(0.04), np.array(0.05)) == pytest.approx(0.092)
-    # Deflator from 1.0 to 1.2.
-    found = general_inflation(np.array(120.0), np.array(100.0), np.array(90.0), np.array(90.0))
-    assert found == pytest.approx(0.2)
+    # Deflator from 1.2 to 1.5.
+    found = general_inflation(np.array(150.0), np.array(100.0), np.array(108.0), np.array(90.0))
+    assert found == pytest.approx(0.25)
     change = smoothed_log_change(np.array(8.0), np.array(1.0), 3)
     assert change == pytest.approx(np.log(2))
     assert revaluation_at(change, np.array(50.0)) == pytest.approx(50)

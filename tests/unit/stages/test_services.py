@@ -88,7 +88,7 @@ def test_costs_exhaust_capital_income_in_the_scope_of_the_rate(scope):
         rate_scope=scope,
     )
     rate = get(book, "rate_of_return/endogenous/_Z")
-    cost = get(book, "capital_compensation/endogenous/current")
+    cost = get(book, "capital_compensation/*/current")
     np.testing.assert_allclose(
         column(cost, "industry=_T asset=_T")[1:], incomes["industry=_T"][1:], rtol=1e-13
     )
@@ -180,15 +180,35 @@ def test_an_industry_without_income_has_no_rate_and_it_is_told():
     assert np.isnan(column(get(book, "rate_of_return/endogenous/_Z"), "industry=C asset=_T")).all()
 
 
-def test_what_is_not_there_is_told_all_at_once():
+def test_what_is_not_there_is_told():
     _, findings = run_stage(services.STAGE, params("services"), block(PRICE, {"asset=_T": [1.0]}))
-    assert {f["measure"] for f in findings} == {
-        "net_stock",
-        "productive_stock",
-        "consumption_of_fixed_capital",
-        "investment_price",
-        "capital_income",
-    }
+    assert [f["measure"] for f in findings] == ["net_stock", "productive_stock", "investment_price"]
+    assert set(rules_of(findings)) == {"not_computed"}
+
+
+def test_a_declared_sector_earns_the_declared_rate_and_what_is_left_is_kept():
+    """Prices of value added rise by 10 %, the real rate is 4 %: r = 1.04 x 1.1 - 1 = .144."""
+    stock = {"sector=S13 industry=A asset=N112": [100.0, 100]}
+    ones = {"asset=_T": [1.0, 1]}
+    elementary = [block(key, stock, first=FIRST) for key in (NET, PRODUCTIVE)]
+    wear = block(CONSUMPTION, {"sector=S13 industry=A asset=N112": [NAN, 5.0]}, first=FIRST)
+    book, findings = run_stage(
+        services.STAGE,
+        params("services", exogenous_sectors=("S13",), real_rate=0.04),
+        *(x for one in (*elementary, wear) for x in (one, *totals(one, ("sector", "industry", "asset")))),
+        block(PRICE, ones, first=FIRST),
+        block(YEAR_END, ones, first=FIRST, part=False),
+        block(INCOME, {"sector=S13 industry=A": [30.0, 30]}, first=FIRST),
+        block("value_added/delivered/current", {"industry=_T": [100.0, 132]}, first=FIRST),
+        block("value_added/delivered/constant", {"industry=_T": [100.0, 120]}, first=FIRST),
+    )
+    rate = get(book, "rate_of_return/exogenous/_Z")
+    assert column(rate, "sector=S13 industry=A asset=_T")[1] == pytest.approx(0.144, rel=1e-13)
+    cost = get(book, "capital_compensation/exogenous/current")
+    assert column(cost, "sector=S13 industry=A asset=N112")[1] == pytest.approx(19.4, rel=1e-13)
+    left = get(book, "unallocated_income/exogenous/current")
+    assert column(left, "sector=S13 industry=A asset=_T")[1] == pytest.approx(30 - 19.4, rel=1e-12)
+    assert not findings
 
 
 def test_chosen_capital_income_may_come_from_several_methods():

@@ -1,3 +1,5 @@
+from dataclasses import replace
+
 import numpy as np
 import pytest
 from small_blocks import block, choice, column, get, holds, params, rules_of, run_stage
@@ -18,21 +20,27 @@ HYPERBOLIC = {
 }  # fmt: skip
 
 
-def _params(rules: dict, timing: str = "mid", window: int = 2):
+def _params(rules: dict, timing: str = "mid", window: int = 2, initial_stock: str = "steady_state"):
     """rules: asset -> its parameters, for every industry; or (asset, industry) -> them."""
 
     def of(asset: str, industry: str):
         found = rules.get((asset, industry), rules.get(asset))
         return None if found is None else tuple(choice(f"asset.{k}", v) for k, v in found.items())
 
-    return params("stocks", assets=of, timing=timing, trend_window=window)
+    made = params("stocks", assets=of, timing=timing)
+    start = replace(
+        made.start,
+        trend_window=choice("capital.trend_window", window),
+        initial_stock=choice("capital.initial_stock", initial_stock),
+    )
+    return replace(made, start=start)
 
 
-def _stocks(rules: dict, rows: dict, *more, timing: str = "mid", window: int = 2):
+def _stocks(rules: dict, rows: dict, *more, **options):
     if not more:
         ones = [1.0] * len(next(iter(rows.values())))
         more = (block(PRICE, {"asset=_T": ones}), block(YEAR_END, {"asset=_T": ones}))
-    return run_stage(stocks.STAGE, _params(rules, timing, window), block(FLOW, rows), *more)
+    return run_stage(stocks.STAGE, _params(rules, **options), block(FLOW, rows), *more)
 
 
 def _growing(first: float, growth: float, years: int, before: int = 1) -> list[float]:
@@ -108,6 +116,41 @@ def test_a_falling_investment_with_a_finite_life_has_a_start():
     assert not findings
     net = column(get(book, STOCK.format("net_stock")), "asset=N112")
     np.testing.assert_allclose(net[2:] / net[1:-1], 0.8, rtol=1e-12)
+
+
+ONES = (block(PRICE, {"asset=_T": [1.0] * 5}), block(YEAR_END, {"asset=_T": [1.0] * 5}))
+
+
+def test_a_benchmark_sets_the_level_and_the_shape_stays():
+    """Investment 100 at year ends, d = .07: the steady state 100 / .07 is scaled to meet 500 in 2012."""
+    flow = {"asset=N112": _growing(100, 0.0, 4)}
+    benchmark = block(
+        "net_stock/delivered/constant", {"asset=N112": [NAN, NAN, 500.0, NAN, NAN]}, chosen=False
+    )
+    book, findings = _stocks(
+        {"N112": GEOMETRIC}, flow, benchmark, *ONES, timing="end", initial_stock="benchmark"
+    )
+    assert not findings
+    factor = (500 - 100 - 93) / (0.93**2 * 100 / 0.07)
+    np.testing.assert_allclose(
+        column(get(book, "benchmark_factor/benchmark/_Z"), "asset=N112")[0], factor, rtol=1e-12
+    )
+    net = column(get(book, STOCK.format("net_stock")), "asset=N112")
+    np.testing.assert_allclose(net[2:4], [500, 0.93 * 500 + 100], rtol=1e-12)
+    opening = column(get(book, "net_stock/benchmark/constant"), "asset=N112")
+    np.testing.assert_allclose(opening[0], factor * 100 / 0.07, rtol=1e-12)
+
+
+def test_a_benchmark_below_what_was_invested_since_is_told():
+    benchmark = block(
+        "net_stock/delivered/constant", {"asset=N112": [NAN, NAN, 150.0, NAN, NAN]}, chosen=False
+    )
+    _, findings = _stocks(
+        {"N112": GEOMETRIC}, {"asset=N112": _growing(100, 0.0, 4)}, benchmark, *ONES,
+        timing="end", initial_stock="benchmark",
+    )  # fmt: skip
+    assert len(findings) == 1
+    assert findings[0]["asset"] == "N112"
 
 
 # --- stocks and what leaves them ------------------------------------------------------------------------------

@@ -4,7 +4,7 @@ import struct
 
 import numpy as np
 import pytest
-from conftest import HIDDEN_RAW, HIDDEN_YEAR
+from small_blocks import HIDDEN_RAW, HIDDEN_YEAR
 
 from keelbook.audit.reading import Build
 from keelbook.store.connect import open_read
