@@ -118,7 +118,7 @@ def test_an_unknown_method_lists_the_valid_ones(published: Path, refused: Callab
 
 
 def test_a_life_and_a_rate_for_one_asset_contradict(published: Path, refused: Callable[..., Any]) -> None:
-    (published / "rules").mkdir()
+    (published / "rules").mkdir(exist_ok=True)
     row = "N1132,_T,cohort_geometric,0.3,7,,,,simultaneous,,decision of the accounts unit,seen"
     (published / "rules" / "assets.csv").write_text(f"{ASSET_HEAD}\n{row}\n", encoding="utf-8")
     refusal = refused("assemble", published, "--quiet")

@@ -77,22 +77,22 @@ FAULTS = {
     ),
     "empty csv": Fault(write(INCOME, b""), 5, (INCOME, "the file is empty", "assembly.toml, line ")),
     "header without a record": Fault(
-        write(HOURS, b"period,branch,status,thousand hours\n"), 5, (HOURS, "no record follows the header")
+        write(HOURS, b"period,sector,branch,status,thousand hours\n"), 5, (HOURS, "no record follows the header")
     ),
     "empty workbook": Fault(write(BOOK, b""), 5, (BOOK, "the file is empty", "assembly.toml, line ")),
     "binary garbage for a workbook": Fault(
         write(BOOK, random.Random(1).randbytes(4096)), 5, (BOOK, "workbook")
     ),
     "text that is not utf-8": Fault(
-        replace(HOURS, b"1985-Q3,A", b"1985-Q3,\xff"), 5, (HOURS, "line 4", "utf-8")
+        replace(HOURS, b"1985-Q3,S11,A", b"1985-Q3,S11,\xff"), 5, (HOURS, "line 4", "utf-8")
     ),
     "wrong code in a csv": Fault(
-        replace(HOURS, b"2016-Q4,A,employees", b"2016-Q4,A9,employees"),
+        replace(HOURS, b"2016-Q4,S11,A,employees", b"2016-Q4,S11,A9,employees"),
         5,
         (f"{HOURS}, line 129", "'A9'", "nearest: A (Agriculture", "[source.codes.industry]"),
     ),
     "wrong label in a sheet": Fault(
-        cell("T4 Volume", "A7", "Manufacturin"),
+        cell("T4 Volume", "B7", "Manufacturin"),
         5,
         (f"{BOOK}, sheet 'T4 Volume', cell", "'Manufacturin'", "nearest: C (Manufacturing)"),
     ),
@@ -100,7 +100,7 @@ FAULTS = {
         cell("T2 Prices", "C9", "n/a yet"), 5, (f"{BOOK}, sheet 'T2 Prices', cell C9", "'n/a yet'")
     ),
     "text in a number column of a csv": Fault(
-        replace(PERSONS, b";203.6;", b";about 200;"), 5, (f"{PERSONS}, line 3, column 3", "'about 200'")
+        replace(PERSONS, b";103.9;", b";about 100;"), 5, (f"{PERSONS}, line 2, column 5", "'about 100'")
     ),
     "a text that looks like a number where none is declared": Fault(
         cell("T4 Volume", "C8", "8112.3"),
@@ -108,15 +108,15 @@ FAULTS = {
         (f"{BOOK}, sheet 'T4 Volume', cell C8", "8112.3", "text_numbers"),
     ),
     "decimal comma where a point is declared": Fault(
-        replace(PERSONS, b";203.6;", b";203,6;"), 5, (f"{PERSONS}, line 3, column 3", "203,6")
+        replace(PERSONS, b";103.9;", b";103,9;"), 5, (f"{PERSONS}, line 2, column 5", "103,9")
     ),
     "duplicate key": Fault(
-        append(HOURS, b"1985-Q1,A,employees,56968\n"),
+        append(HOURS, b"1985-Q1,S11,A,employees,38712\n"),
         5,
-        (f"{HOURS}, line 2242", "more than one figure for the same key", "row 2, column 4"),
+        (f"{HOURS}, line 2942", "more than one figure for the same key", "row 2, column 5"),
     ),
     "an index of zero": Fault(
-        cell("T2 Prices", "F12", 0), 5, (f"{BOOK}, sheet 'T2 Prices', cell F12", "found: 0", "more than 0")
+        cell("T2 Prices", "G12", 0), 5, (f"{BOOK}, sheet 'T2 Prices', cell G12", "found: 0", "more than 0")
     ),
     "a header one row lower in a sheet": Fault(
         workbook(lambda book: book["T4 Volume"].insert_rows(1)),
@@ -134,7 +134,7 @@ FAULTS = {
         (f"{HOURS}, line 1", "'thousand hours'", "thousands of hours"),
     ),
     "a renamed column in a sheet": Fault(
-        cell("T1 Investment", "B4", "Type of asset"), 5, (f"{BOOK}, sheet 'T1 Investment'", "'Asset'")
+        cell("T1 Investment", "C4", "Type of asset"), 5, (f"{BOOK}, sheet 'T1 Investment'", "'Asset'")
     ),
     "a renamed sheet": Fault(
         workbook(lambda book: setattr(book["T4 Volume"], "title", "T4 Volumes")),
@@ -142,12 +142,12 @@ FAULTS = {
         (BOOK, "'T4 Volume'", "T4 Volumes"),
     ),
     "incomes that do not add up": Fault(
-        replace(INCOME, b";B.1g;6.200,0;", b";B.1g;6.900,0;"),
+        replace(INCOME, b";B.1g;1.800,0;", b";B.1g;2.500,0;"),
         5,
         (
-            f"{INCOME}, line 2, column 4",
+            f"{INCOME}, line 2, column 5",
             "value_added is not the sum of its terms",
-            "found: 6900",
+            "found: 2500",
             "difference 700",
         ),
     ),
@@ -171,7 +171,7 @@ def test_is_refused_with_place_and_remedy(name: str, published: Path, refused: C
 def test_a_refused_run_keeps_what_it_found_for_its_owner(
     published: Path, refused: Callable[..., Any]
 ) -> None:
-    cell("T2 Prices", "F12", 0)(published)
+    cell("T2 Prices", "G12", 0)(published)
     assert refused("assemble", published, "--quiet").code == 5
     folder = published / "build" / "refused"
     assert sorted(path.name for path in folder.iterdir()) == ["evidence.duckdb", "log.jsonl"]
@@ -180,22 +180,22 @@ def test_a_refused_run_keeps_what_it_found_for_its_owner(
         rows = con.execute(
             'select rule, sheet, "row", "column" from finding where severity = \'stop\''
         ).fetchall()
-    assert rows == [("nonpositive_index", "T2 Prices", 12, 6)]
+    assert rows == [("nonpositive_index", "T2 Prices", 12, 7)]
 
 
 def test_screening_refuses_the_same(published: Path, refused: Callable[..., Any]) -> None:
-    cell("T2 Prices", "F12", 0)(published)
+    cell("T2 Prices", "G12", 0)(published)
     refusal = refused("screen", published)
     assert refusal.code == 5
-    assert f"{BOOK}, sheet 'T2 Prices', cell F12" in refusal.text
+    assert f"{BOOK}, sheet 'T2 Prices', cell G12" in refusal.text
 
 
 def test_everything_wrong_is_told_at_once(published: Path, refused: Callable[..., Any]) -> None:
-    cell("T2 Prices", "F12", 0)(published)
+    cell("T2 Prices", "G12", 0)(published)
     write(INCOME, b"")(published)
-    replace(PERSONS, b";203.6;", b";about 200;")(published)
+    replace(PERSONS, b";103.9;", b";about 100;")(published)
     text = refused("assemble", published, "--quiet").text
-    for part in ("cell F12", INCOME, f"{PERSONS}, line 3, column 3"):
+    for part in ("cell G12", INCOME, f"{PERSONS}, line 2, column 5"):
         assert part in text
 
 
@@ -211,7 +211,7 @@ def test_a_mended_source_is_built_again(published: Path, refused: Callable[..., 
 
 def without_a_quarter(folder: Path) -> None:
     lines = (folder / HOURS).read_bytes().splitlines(keepends=True)
-    kept = [line for line in lines if not line.startswith(b"2012-Q2,M,self-employed,")]
+    kept = [line for line in lines if not line.startswith(b"2012-Q2,S14,M,self-employed,")]
     assert len(kept) == len(lines) - 1
     (folder / HOURS).write_bytes(b"".join(kept))
 

@@ -22,7 +22,7 @@ SUM = "select sum(value) from panel where measure = 'net_stock'"
 
 def change_a_source(folder: Path) -> None:
     path = folder / "sources" / "persons_employed.csv"
-    path.write_bytes(path.read_bytes().replace(b";203.6;", b";203.7;", 1))
+    path.write_bytes(path.read_bytes().replace(b";103.9;", b";103.7;", 1))
 
 
 def test_a_second_writer_is_told_to_wait(published: Path, refused: Callable[..., Any]) -> None:
@@ -122,12 +122,12 @@ def tampered(published: Path) -> Path:
         con.execute(
             "update figure set value = value * 1.001 where period = 2015 and series_id = (select series_id from series "
             "where measure = 'net_stock' and method = 'perpetual_inventory' and price_basis = 'constant' "
-            "and industry = 'C' and asset = 'N1132')"
+            "and area = 'XV' and sector = 'S11' and industry = 'C' and asset = 'N1132')"
         )
     return published
 
 
-TRACE = ("net_stock", "--industry", "C", "--asset", "N1132", "--year", "2015")
+TRACE = ("net_stock", "--area", "XV", "--sector", "S11", "--industry", "C", "--asset", "N1132", "--year", "2015")
 
 
 def test_trace_notices_a_changed_figure(tampered: Path) -> None:

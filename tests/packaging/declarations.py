@@ -16,6 +16,7 @@ from keelbook.contracts.assets import REFERENCE_TABLES, load_asset_rules, load_r
 from keelbook.contracts.codes import load_code_lists
 from keelbook.contracts.measures import load_measures
 from keelbook.contracts.parameters import load_parameters
+from keelbook.contracts.retirement import load_retirement
 from keelbook.contracts.screening_rules import load_screening_rules
 from keelbook.contracts.tables import load_tables
 from keelbook.locate import folder
@@ -48,6 +49,7 @@ def declarations() -> dict[str, Any]:
         "codes": plain(load_code_lists()),
         "parameters": plain(load_parameters().all()),
         "assets": plain(load_asset_rules().all()),
+        "retirement": plain(load_retirement()),
         "reference": {name: plain(load_reference_rates(name)) for name in REFERENCE_TABLES},
         "screening": plain(load_screening_rules()),
         "files": [

@@ -12,6 +12,15 @@ from keelbook.assembly.run import assemble
 
 
 @pytest.fixture(scope="session")
+def first_build(tmp_path_factory: pytest.TempPathFactory) -> Path:
+    """Return the first assembly of `keelbook new`, assembled: one area, industries C and G, two assets."""
+    folder = tmp_path_factory.mktemp("first") / "assembly"
+    write_new(folder)
+    assemble(folder)
+    return folder
+
+
+@pytest.fixture(scope="session")
 def hidden_build(tmp_path_factory: pytest.TempPathFactory) -> Path:
     """Return an assembled first assembly in which one source cell is confidential."""
     folder = tmp_path_factory.mktemp("hidden") / "assembly"

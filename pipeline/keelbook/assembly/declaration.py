@@ -654,7 +654,12 @@ def _sheets(sources: Iterable[Source]) -> dict[str, SourceSheet]:
 
 def _stray_rules(folder: Path) -> list[Problem]:
     """A file that no loader reads would change nothing, silently."""
-    valid = [f"{file}.toml" for file in declared_parameters()] + ["screening.toml", "assets.csv", "codes"]
+    valid = [f"{file}.toml" for file in declared_parameters()] + [
+        "screening.toml",
+        "assets.csv",
+        "retirement.csv",
+        "codes",
+    ]
     rules = folder / "rules"
     found = [
         Problem(

@@ -137,9 +137,6 @@ def asset_sets(rules: AssetRules) -> Any:
         rule = rules.resolve(asset, industry)
         if rule is None:
             return None
-        return tuple(
-            Choice(f"asset.{p.name.rsplit('.', 1)[1]}", p.value, p.file, p.line, p.citation)
-            for p in rule.parameters()
-        )
+        return tuple(as_choice(p) for p in rule.parameters())
 
     return of

@@ -12,13 +12,16 @@ from pydantic_core import PydanticCustomError
 from keelbook.contracts.codes import NOT_APPLICABLE, TOTAL, CodeLists, Mark, load_code_lists
 from keelbook.contracts.loader import Declared, fault, faults, load_csv_rows
 from keelbook.contracts.parameters import Parameter
-from keelbook.errors import did_you_mean
+from keelbook.contracts.retirement import RetirementPattern, load_retirement
+from keelbook.errors import DeclarationError, Problem, did_you_mean
 from keelbook.locate import folder
+from keelbook.methods.weights import period_end_weights
 
 REFERENCE_TABLES = ("bea_1997", "bea_structures", "bea_intellectual_property")
 """Published rates shipped as they were read: `rules/<name>.csv`."""
 
 Efficiency = Literal["cohort_geometric", "geometric", "hyperbolic", "linear", "constant"]
+AgePrice = Literal["straight_line", "declining_balance"]
 
 _NUMBERS = ("rate", "life", "declining_balance_rate", "gross_life", "b", "discount_rate")
 _NEEDS: Mapping[str, tuple[str, ...]] = {
@@ -27,6 +30,8 @@ _NEEDS: Mapping[str, tuple[str, ...]] = {
     "hyperbolic": ("life", "b", "retirement", "discount_rate"),
     "linear": ("life", "retirement", "discount_rate"),
     "constant": ("life", "retirement", "discount_rate"),
+    "straight_line": ("life", "retirement", "discount_rate"),
+    "declining_balance": ("life", "declining_balance_rate", "retirement", "discount_rate"),
 }
 _COHORT_MAY = ("rate", "life", "declining_balance_rate", "gross_life", "retirement")
 
@@ -34,20 +39,23 @@ _COHORT_MAY = ("rate", "life", "declining_balance_rate", "gross_life", "retireme
 class AssetRow(Declared):
     """One row of `rules/assets.csv`.
 
-    `life` is the life of the profile. A `cohort_geometric` row gives either `rate`, or `life` and
-    `declining_balance_rate` (rate = declining_balance_rate / life); its `gross_life` is the service life for
-    the gross stock, and with `rate` and `declining_balance_rate` the one the published rate rests on.
+    A row gives either an `efficiency`, from which prices by age follow at the `discount_rate`, or an `age_price`,
+    from which the efficiency follows. `life` is the mean life, `retirement` a name of `rules/retirement.csv`.
+    A `cohort_geometric` row gives either `rate`, or `life` and `declining_balance_rate` (rate =
+    declining_balance_rate / life); its `gross_life` is the mean life for the gross stock, and with `rate` and
+    `declining_balance_rate` the one the published rate rests on.
     """
 
     asset: str
     industry: str
-    efficiency: Efficiency
+    efficiency: Efficiency | None = None
+    age_price: AgePrice | None = None
     rate: float | None = Field(None, gt=0, le=1)
-    life: float | None = Field(None, gt=0)
+    life: float | None = Field(None, ge=1)
     declining_balance_rate: float | None = Field(None, gt=0)
-    gross_life: float | None = Field(None, gt=0)
+    gross_life: float | None = Field(None, ge=1)
     b: float | None = Field(None, le=1)
-    retirement: Literal["simultaneous"] | None = None
+    retirement: str | None = None
     discount_rate: float | None = Field(None, gt=-1)
     citation: str
     status: Mark
@@ -68,42 +76,101 @@ class AssetRow(Declared):
             )
         return code
 
+    @field_validator("retirement")
+    @classmethod
+    def _pattern(cls, name: str, info: ValidationInfo) -> str:
+        patterns: Mapping[str, RetirementPattern] | None = (info.context or {})["patterns"]
+        if patterns is not None and name not in patterns:
+            raise fault(
+                f"unknown retirement '{name}'",
+                found=name,
+                expected="one of: " + ", ".join(patterns),
+                remedy=did_you_mean(name, patterns) or "add a row to rules/retirement.csv",
+            )
+        return name
+
     @model_validator(mode="after")
-    def _no_contradiction(self) -> "AssetRow":
+    def _no_contradiction(self, info: ValidationInfo) -> "AssetRow":
+        form = self.efficiency or self.age_price
+        if form is None or (self.efficiency and self.age_price):
+            raise fault(
+                "either an efficiency or an age_price is needed",
+                found=f"efficiency {self.efficiency}, age_price {self.age_price}" if form else "neither",
+                expected="one of the two: the other follows from it at the discount_rate",
+                remedy="leave one of the two empty" if form else "give one of the two",
+            )
         found = []
-        cohort = self.efficiency == "cohort_geometric"
-        needs = _NEEDS[self.efficiency]
+        cohort = form == "cohort_geometric"
+        needs = _NEEDS[form]
         may = _COHORT_MAY if cohort else needs
         for name in (*_NUMBERS, "retirement"):
             given = getattr(self, name) is not None
             if given and name not in may:
                 found.append(
                     fault(
-                        f"'{name}' contradicts {self.efficiency}",
+                        f"'{name}' contradicts {form}",
                         at=(name,),
                         found=f"{name} {getattr(self, name)}",
                         expected="one of: " + ", ".join(may),
-                        remedy=f"leave {name} empty, or choose another efficiency",
+                        remedy=f"leave {name} empty, or choose another form",
                     )
                 )
             elif name in needs and not given:
                 found.append(
                     fault(
-                        f"{self.efficiency} without '{name}'",
+                        f"{form} without '{name}'",
                         found="an empty cell",
                         expected=name,
-                        remedy=f"give {name}, or choose another efficiency",
+                        remedy=f"give {name}, or choose another form",
                     )
                 )
         if cohort:
             found += self._cohort_faults()
+        elif not found and (patterns := (info.context or {})["patterns"]) is not None:
+            found += self._without_weights(patterns[self.retirement])
         if found:
             raise faults(found)
         return self
 
+    def _without_weights(self, pattern: RetirementPattern) -> list[PydanticCustomError]:
+        """Some values are possible each, but not together: the arithmetic itself says so, whatever the timing."""
+        try:
+            period_end_weights(
+                efficiency=self.efficiency,
+                retirement=pattern.distribution,
+                retirement_shape=pattern.shape,
+                life=self.life,
+                rate=self.rate,
+                b=self.b,
+                discount_rate=self.discount_rate,
+                age_price_form=self.age_price,
+                factor=self.declining_balance_rate,
+                timing="mid",
+                length=1,
+            )
+        except ValueError as error:
+            return [
+                fault(
+                    "these parameters give no profile",
+                    found=str(error),
+                    expected="parameters that go together",
+                    remedy="correct one of them",
+                )
+            ]
+        return []
+
     def _cohort_faults(self) -> list[PydanticCustomError]:
         found = []
         derived = self.life is not None and self.declining_balance_rate is not None
+        if self.life and self.declining_balance_rate and self.declining_balance_rate > self.life:
+            found.append(
+                fault(
+                    "declining_balance_rate / life is no rate",
+                    found=f"{self.declining_balance_rate / self.life:g}",
+                    expected="at most 1",
+                    remedy="correct one of the two",
+                )
+            )
         if self.rate is not None and self.life is not None:
             found.append(
                 fault(
@@ -150,7 +217,7 @@ class AssetRow(Declared):
                 fault(
                     "a life for the gross stock and a retirement go together",
                     found=f"retirement {self.retirement or 'empty'}",
-                    expected="simultaneous" if has_life else "an empty cell",
+                    expected="a name of rules/retirement.csv" if has_life else "an empty cell",
                     remedy="correct one",
                 )
             )
@@ -191,7 +258,8 @@ class AssetRule:
 
     asset: str
     industry: str
-    efficiency: Efficiency
+    efficiency: Efficiency | None
+    age_price: AgePrice | None
     rate: float | None
     life: float | None
     declining_balance_rate: float | None
@@ -203,18 +271,23 @@ class AssetRule:
     status: Mark
     file: str
     line: int
+    pattern: RetirementPattern | None
 
     def parameters(self) -> list[Parameter]:
-        """Return what a stock under this rule rests on, for the record."""
-        at = f"asset.{self.asset}.{self.industry}"
-        names = ("efficiency", *_NUMBERS, "retirement")
-        return [
-            Parameter(
-                f"{at}.{name}", getattr(self, name), self.file, self.line, f"{self.citation} [{self.status}]"
-            )
-            for name in names
+        """Return what a stock under this rule rests on, for the record: `asset.life`, `asset.retirement.sd`, ..."""
+        cited = f"{self.citation} [{self.status}]"
+        out = [
+            Parameter(f"asset.{name}", getattr(self, name), self.file, self.line, cited)
+            for name in ("efficiency", "age_price", *_NUMBERS, "retirement")
             if getattr(self, name) is not None
         ]
+        if self.pattern is not None:
+            cited = f"{self.pattern.citation} [{self.pattern.status}]"
+            out += [
+                Parameter(f"asset.retirement.{name}", value, self.pattern.file, self.pattern.line, cited)
+                for name, value in (("distribution", self.pattern.distribution), *self.pattern.shape)
+            ]
+        return out
 
 
 class AssetRules:
@@ -253,13 +326,24 @@ def load_asset_rules(assembly_folder: Path | None = None, lists: CodeLists | Non
         DeclarationError: a row is not as it must be or contradicts itself; every fault with its line.
     """
     lists = lists or load_code_lists(assembly_folder)
-    rules = _read(folder("rules") / "assets.csv", "keelbook/rules/assets.csv", lists)
+    problems: list[Problem] = []
+    patterns = None
+    try:
+        patterns = load_retirement(assembly_folder)
+    except DeclarationError as error:
+        problems += error.problems
     own_file = assembly_folder / "rules" / "assets.csv" if assembly_folder else None
+    own: list[AssetRule] = []
     if own_file is not None and own_file.is_file():
-        own = _read(own_file, "rules/assets.csv", lists)
-        covered = {rule.asset for rule in own}
-        rules = [rule for rule in rules if rule.asset not in covered] + own
-    return AssetRules(rules, lists)
+        try:
+            own = _read(own_file, "rules/assets.csv", lists, patterns)
+        except DeclarationError as error:
+            problems += error.problems
+    if problems:
+        raise DeclarationError(problems)
+    shipped = _read(folder("rules") / "assets.csv", "keelbook/rules/assets.csv", lists, patterns)
+    covered = {rule.asset for rule in own}
+    return AssetRules([rule for rule in shipped if rule.asset not in covered] + own, lists)
 
 
 @lru_cache(maxsize=8)
@@ -272,9 +356,13 @@ def load_reference_rates(name: str) -> tuple[ReferenceRate, ...]:
     return tuple(load_csv_rows(folder("rules") / f"{name}.csv", ReferenceRate, key=("asset", "period")))
 
 
-def _read(path: Path, label: str, lists: CodeLists) -> list[AssetRule]:
+def _read(
+    path: Path, label: str, lists: CodeLists, patterns: Mapping[str, RetirementPattern] | None
+) -> list[AssetRule]:
+    """Return the rules of a file. Without `patterns` (theirs is a faulty file) no retirement is looked up."""
     rules = []
-    for row in load_csv_rows(path, AssetRow, key=("asset", "industry"), context={"lists": lists}):
+    context = {"lists": lists, "patterns": patterns}
+    for row in load_csv_rows(path, AssetRow, key=("asset", "industry"), context=context):
         given = row.model_dump()
         if (
             row.efficiency == "cohort_geometric"
@@ -284,7 +372,8 @@ def _read(path: Path, label: str, lists: CodeLists) -> list[AssetRule]:
             given["rate"] = row.declining_balance_rate / row.life
             given["gross_life"] = row.gross_life or row.life
             given["life"] = None
-        rules.append(AssetRule(file=label, **given))
+        pattern = patterns[row.retirement] if patterns and row.retirement else None
+        rules.append(AssetRule(file=label, pattern=pattern, **given))
     return rules
 
 

@@ -34,11 +34,23 @@ _WEIGHTS_OF = {
 }
 
 
+_DISTRIBUTION, _SHAPE = "asset.retirement.distribution", "asset.retirement."
+
+
 def weights_of(choices: Mapping[str, Any], length: int) -> Weights:
     """Return the period-end weights that one set of asset parameters describes."""
+    by_price = choices.get("asset.age_price")
     return period_end_weights(
-        efficiency=choices["asset.efficiency"],
-        retirement=choices.get("asset.retirement"),
+        efficiency=choices.get("asset.efficiency"),
+        retirement=choices.get(_DISTRIBUTION),
+        retirement_shape=tuple(
+            (name.removeprefix(_SHAPE), float(value))
+            for name, value in choices.items()
+            if name.startswith(_SHAPE) and name != _DISTRIBUTION
+        ),
+        age_price_mode=choices["capital.age_price_mode"],
+        age_price_form=by_price,
+        factor=choices.get("asset.declining_balance_rate") if by_price else None,
         life=choices.get("asset.life"),
         rate=choices.get("asset.rate"),
         b=choices.get("asset.b"),
@@ -49,15 +61,16 @@ def weights_of(choices: Mapping[str, Any], length: int) -> Weights:
     )
 
 
+def _cohort_geometric(choices: Mapping[str, Any]) -> bool:
+    return choices.get("asset.efficiency") == COHORT_GEOMETRIC
+
+
 def kernel(measure: str, choices: Mapping[str, Any], length: int) -> Kernel:
     """Return the weights of one measure, as a recursion where the form has one."""
     weights = weights_of(choices, max(length, 3))
     own: F8 = getattr(weights, _WEIGHTS_OF[measure])
     stock: F8 = getattr(weights, _WEIGHTS_OF[LOSSES.get(measure, measure)])
-    if choices["asset.efficiency"] == COHORT_GEOMETRIC and _WEIGHTS_OF[measure] not in (
-        "gross",
-        "retirements",
-    ):
+    if _cohort_geometric(choices) and _WEIGHTS_OF[measure] not in ("gross", "retirements"):
         return GeometricKernel(float(own[0]), float(own[1]), 1 - choices["asset.rate"], float(stock[0]))
     return TableKernel(own, stock)
 
@@ -258,7 +271,7 @@ def start(
                 part=False,
             )
     blocks.extend(steady.values())
-    findings = _no_start(investment, growth, sets, which)
+    findings = _no_start(investment, growth, sets, which) + _prices_against_rate(investment, sets, which)
     factor = None
     if params.initial_stock.value in ("benchmark", "two_benchmarks"):
         factor = _factors(investment, sets, which, benchmarks, steady, growth, params)
@@ -367,7 +380,7 @@ def solved_rates(
         flow, stock = investment.value[:, n], benchmark.value[:, columns[n]]
         there = np.flatnonzero(np.isfinite(stock))
         known = [int(t) for t in there if np.isfinite(flow[int(there[0]) + 1 : t + 1]).all()]
-        if choices["asset.efficiency"] != COHORT_GEOMETRIC or len(known) < 2:
+        if not _cohort_geometric(choices) or len(known) < 2:
             continue
         first, last = known[0], known[-1]
         solved = rate_between(
@@ -434,6 +447,38 @@ def _set_defines(measure: str, choices: Mapping[str, Any]) -> bool:
     return getattr(weights_of(choices, 3), _WEIGHTS_OF[measure]) is not None
 
 
+ROUNDING = 1e-12
+"""Rise of an efficiency that is rounding alone."""
+
+
+def _prices_against_rate(investment: Block, sets: tuple[MethodSet, ...], which: I4) -> list[dict[str, Any]]:
+    """Return a finding for each set whose declared prices by age imply an efficiency below zero or rising with age."""
+    out = []
+    for i, choices in enumerate({c.name: c.value for c in s} for s in sets):
+        if "asset.age_price" not in choices or not (which == i).any():
+            continue
+        efficiency = weights_of(choices, 1).productive
+        before = np.concatenate(([1.0], efficiency[:-1]))
+        bad = np.flatnonzero((efficiency < -ROUNDING) | (efficiency > before + ROUNDING))
+        if not len(bad):
+            continue
+        v = int(bad[0])
+        out.append(
+            note(
+                "prices_against_discount_rate",
+                "warn",
+                "the declared prices by age and the discount rate imply an efficiency that is below zero or rises",
+                investment.series.table,
+                int(investment.series.key[int(np.argmax(which == i))]),
+                measure="productive_stock",
+                found=f"{efficiency[v]:.4f} after {before[v]:.4f}, {v} periods after investment",
+                expected="an efficiency from 1 down to 0",
+                remedy="choose another asset.age_price, retirement or discount_rate, or declare the efficiency",
+            )
+        )
+    return out
+
+
 def _no_start(
     investment: Block, growth: Block, sets: tuple[MethodSet, ...], which: Any
 ) -> list[dict[str, Any]]:
@@ -466,4 +511,4 @@ def _no_start(
 
 
 def _geometric_rate(choices: Mapping[str, Any]) -> float:
-    return float(choices["asset.rate"]) if choices["asset.efficiency"] == COHORT_GEOMETRIC else np.inf
+    return float(choices["asset.rate"]) if _cohort_geometric(choices) else np.inf

@@ -13,15 +13,15 @@ HEADER = (
 )
 
 
-def office(tmp_path: Path, *rows: str) -> Path:
+def office(tmp_path: Path, *rows: str, header: str = HEADER) -> Path:
     (tmp_path / "rules").mkdir()
-    text = "\n".join([HEADER, *(f"{row},office,seen" for row in rows), ""])
+    text = "\n".join([header, *(f"{row},office,seen" for row in rows), ""])
     (tmp_path / "rules" / "assets.csv").write_text(text, encoding="utf-8")
     return tmp_path
 
 
-def refused(tmp_path: Path, *rows: str) -> list[Problem]:
-    folder = office(tmp_path, *rows)
+def refused(tmp_path: Path, *rows: str, header: str = HEADER) -> list[Problem]:
+    folder = office(tmp_path, *rows, header=header)
     with pytest.raises(DeclarationError) as caught:
         load_asset_rules(folder)
     assert {problem.file for problem in caught.value.problems} == {str(folder / "rules" / "assets.csv")}
@@ -89,9 +89,14 @@ def test_parameters_of_a_rule_say_where_they_are_set() -> None:
     assert rule is not None
     given = {parameter.name: parameter for parameter in rule.parameters()}
     assert set(given) == {
-        f"asset.N11O._T.{name}" for name in ("efficiency", "life", "b", "discount_rate", "retirement")
+        "asset.efficiency",
+        "asset.life",
+        "asset.b",
+        "asset.discount_rate",
+        "asset.retirement",
+        "asset.retirement.distribution",
     }
-    life = given["asset.N11O._T.life"]
+    life = given["asset.life"]
     assert (life.value, life.file, life.line) == (rule.life, "keelbook/rules/assets.csv", rule.line)
     assert life.citation.endswith("[from memory]")
 
@@ -120,7 +125,7 @@ def test_parameters_of_a_rule_say_where_they_are_set() -> None:
         (
             "N112,_T,cohort_geometric,0.03,,,40,,,",
             "a life for the gross stock and a retirement",
-            "simultaneous",
+            "a name of rules/retirement.csv",
         ),
         (
             "N112,_T,cohort_geometric,0.03,,,,,simultaneous,",
@@ -140,7 +145,13 @@ def test_parameters_of_a_rule_say_where_they_are_set() -> None:
             "'b' is not as it must be",
             "less than or equal to 1",
         ),
-        ("N112,_T,hyperbolic,,0,,,0.5,simultaneous,0.04", "'life' is not as it must be", "greater than 0"),
+        (
+            "N112,_T,hyperbolic,,0,,,0.5,simultaneous,0.04",
+            "'life' is not as it must be",
+            "greater than or equal to 1",
+        ),
+        ("N112,_T,cohort_geometric,0.1,,,0.4,,simultaneous,", "'gross_life' is not as it must be", "greater"),
+        ("N112,_T,cohort_geometric,,3,3.5,,,simultaneous,", "is no rate", "at most 1"),
         ("N112,_T,cohort_geometric,0,,,,,,", "'rate' is not as it must be", "greater than 0"),
         ("N112,_T,cohort_geometric,1.2,,,,,,", "'rate' is not as it must be", "less than or equal to 1"),
         (
@@ -148,6 +159,13 @@ def test_parameters_of_a_rule_say_where_they_are_set() -> None:
             "'efficiency' is not as it must be",
             "one of: cohort",
         ),
+        (
+            "N112,_T,linear,,20,,,,simultanous,0.04",
+            "unknown retirement 'simultanous'",
+            "one of: simultaneous",
+        ),
+        ("N112,_T,linear,,20,,,,simultaneous,-1", "'discount_rate' is not as it must be", "greater than -1"),
+        ("N112,_T,,0.03,,,,,,", "either an efficiency or an age_price", "one of the two"),
         ("N1129,_T,cohort_geometric,0.03,,,,,,", "unknown asset 'N1129'", "a code of the list asset"),
         ("N112,CC,cohort_geometric,0.03,,,,,,", "unknown industry 'CC'", "a code of the list industry"),
         ("N112,_Z,cohort_geometric,0.03,,,,,,", "unknown industry '_Z'", "a code of the list industry"),
@@ -159,6 +177,70 @@ def test_a_contradiction_is_refused_with_its_line(tmp_path: Path, row: str, what
     assert what in problem.what
     assert problem.expected.startswith(expected)
     assert problem.remedy
+
+
+PRICES = HEADER.replace("efficiency", "efficiency,age_price")
+
+
+@pytest.mark.parametrize(
+    ("row", "what"),
+    [
+        ("N112,_T,linear,straight_line,,20,,,,simultaneous,0.04", "either an efficiency or an age_price"),
+        ("N112,_T,,straight,,20,,,,simultaneous,0.04", "'age_price' is not as it must be"),
+        ("N112,_T,,straight_line,,20,,,,simultaneous,", "straight_line without 'discount_rate'"),
+        ("N112,_T,,straight_line,,20,2,,,simultaneous,0.04", "'declining_balance_rate' contradicts"),
+        ("N112,_T,,declining_balance,,20,,,,simultaneous,0.04", "without 'declining_balance_rate'"),
+        ("N112,_T,,straight_line,,20,,,,simultaneous,-0.2", "these parameters give no profile"),
+    ],
+)
+def test_a_price_by_age_is_checked_like_an_efficiency(tmp_path: Path, row: str, what: str) -> None:
+    (problem,) = refused(tmp_path, row, header=PRICES)
+    assert problem.place == "line 2"
+    assert what in problem.what
+    assert problem.remedy
+
+
+def test_the_nearest_retirement_is_named(tmp_path: Path) -> None:
+    (problem,) = refused(tmp_path, "N112,_T,linear,,20,,,,winfrey_s4,0.04")
+    assert problem.remedy == "did you mean 'winfrey_s3'?"
+
+
+def test_a_rule_records_its_retirement_pattern(tmp_path: Path) -> None:
+    folder = office(tmp_path, "N112,_T,linear,,20,,,,truncated_normal,0.04", "N113,_T,linear,,9,,,,ours,0.04")
+    (folder / "rules" / "retirement.csv").write_text(
+        "name,distribution,sd,low,high,citation,status\nours,truncated_normal,0.3,0,2,survey 2019,seen\n",
+        encoding="utf-8",
+    )
+    rules = load_asset_rules(folder)
+    for asset, sd, file in (
+        ("N112", 0.5, "keelbook/rules/retirement.csv"),
+        ("N113", 0.3, "rules/retirement.csv"),
+    ):
+        rule = rules.resolve(asset, "C")
+        assert rule is not None
+        given = {parameter.name: parameter for parameter in rule.parameters()}
+        assert given["asset.retirement.distribution"].value == "truncated_normal"
+        assert {name for name in given if name.startswith("asset.retirement.")} == {
+            f"asset.retirement.{name}" for name in ("distribution", "sd", "low", "high")
+        }
+        assert (given["asset.retirement.sd"].value, given["asset.retirement.sd"].file) == (sd, file)
+    assert given["asset.retirement.sd"].line == 2
+    assert given["asset.retirement.sd"].citation == "survey 2019 [seen]"
+    assert given["asset.retirement"].file == "rules/assets.csv"
+
+
+def test_faults_of_assets_and_of_retirement_are_told_together(tmp_path: Path) -> None:
+    """A pattern that could not be read is not called unknown."""
+    folder = office(tmp_path, "N112,_T,linear,,20,,,,ours,0.04", "N113,_T,linear,,0,,,,ours,0.04")
+    (folder / "rules" / "retirement.csv").write_text(
+        "name,distribution,sd,citation,status\nours,winfrey_moment,0.6,survey,seen\n", encoding="utf-8"
+    )
+    with pytest.raises(DeclarationError) as caught:
+        load_asset_rules(folder)
+    assert [(Path(p.file).name, p.place) for p in caught.value.problems] == [
+        ("retirement.csv", "line 2"),
+        ("assets.csv", "line 3"),
+    ]
 
 
 def test_all_faults_of_all_rows_at_once(tmp_path: Path) -> None:

@@ -6,6 +6,7 @@ from keelbook.contracts.assets import REFERENCE_TABLES, load_asset_rules, load_r
 from keelbook.contracts.codes import SHIPPED, load_code_lists
 from keelbook.contracts.measures import load_measures
 from keelbook.contracts.parameters import declared_parameters, load_parameters
+from keelbook.contracts.retirement import load_retirement
 from keelbook.contracts.screening_rules import load_screening_rules
 from keelbook.contracts.tables import NOT_TABLES, load_tables
 from keelbook.locate import folder
@@ -27,5 +28,10 @@ def test_every_rule_file_loads_and_none_is_stray() -> None:
     codes = {f"codes/{name}.csv" for name in SHIPPED if load_code_lists().codes(name)}
     references = {f"{name}.csv" for name in REFERENCE_TABLES if load_reference_rates(name)}
     assert load_asset_rules().all()
+    assert load_retirement()
     assert load_screening_rules()
-    assert files(folder("rules")) == parameters | codes | references | {"assets.csv", "screening.toml"}
+    assert files(folder("rules")) == parameters | codes | references | {
+        "assets.csv",
+        "retirement.csv",
+        "screening.toml",
+    }

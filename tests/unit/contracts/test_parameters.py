@@ -73,7 +73,7 @@ def test_all_faults_of_a_rule_file_at_once(tmp_path: Path) -> None:
         ("line 2", "one of: start, mid, end"),
         ("line 5", "a whole number from 3 to 100"),
         ("line 6", "a source, or who decided and when"),
-        ("line 8", "one of: pooled"),
+        ("line 8", "one of: pooled, by_life"),
     ]
 
 

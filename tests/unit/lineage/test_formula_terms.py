@@ -139,21 +139,27 @@ def _stocks_and_costs(rng: np.random.Generator, roles: int) -> Arrays:
     return out
 
 
-def _asset(efficiency: str, timing: str, **parameters: Any) -> dict[str, Any]:
-    return {
-        "asset.efficiency": efficiency,
-        "capital.timing": timing,
-        **{f"asset.{name}": value for name, value in parameters.items()},
-    }
+def _asset(timing: str, mode: str = "pooled", **parameters: Any) -> dict[str, Any]:
+    """Return a parameter set; a name such as `retirement__sd` stands for `asset.retirement.sd`."""
+    given = {f"asset.{name.replace('__', '.')}": value for name, value in parameters.items()}
+    return {"capital.timing": timing, "capital.age_price_mode": mode, **given}
 
+
+AT_ONCE = {"retirement__distribution": "simultaneous"}
+NORMAL = {
+    "retirement__distribution": "truncated_normal",
+    "retirement__sd": 0.5,
+    "retirement__low": 0.02,
+    "retirement__high": 1.98,
+}
 
 ASSETS = (
-    _asset("cohort_geometric", "mid", rate=0.1, gross_life=6, retirement="simultaneous"),
-    _asset("cohort_geometric", "start", rate=0.3, gross_life=25, retirement="simultaneous"),
-    _asset("cohort_geometric", "end", rate=0.02, gross_life=9.5, retirement="simultaneous"),
-    _asset("hyperbolic", "mid", life=5, b=0.5, discount_rate=0.04, retirement="simultaneous"),
-    _asset("hyperbolic", "end", life=30, b=0.75, discount_rate=0.0, retirement="simultaneous"),
-    _asset("linear", "start", life=8.25, discount_rate=0.03, retirement="simultaneous"),
+    _asset("mid", efficiency="cohort_geometric", rate=0.1, gross_life=6, **AT_ONCE),
+    _asset("start", efficiency="cohort_geometric", rate=0.3, gross_life=25, **NORMAL),
+    _asset("end", efficiency="cohort_geometric", rate=0.02, gross_life=9.5, **AT_ONCE),
+    _asset("mid", efficiency="hyperbolic", life=5, b=0.5, discount_rate=0.04, **AT_ONCE),
+    _asset("end", "by_life", efficiency="hyperbolic", life=30, b=0.75, discount_rate=0.0, **NORMAL),
+    _asset("start", age_price="straight_line", life=8.25, discount_rate=0.03, **AT_ONCE),
 )
 
 UNITS = ({"source.unit_mult": 3, "measure.unit_mult": 6}, {"source.unit_mult": 0, "measure.unit_mult": 0})

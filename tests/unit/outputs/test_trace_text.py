@@ -8,14 +8,14 @@ from keelbook.outputs.trace_text import address, as_json, lines
 
 
 @pytest.fixture(scope="module")
-def build(demo_build):
-    with Build(demo_build) as opened:
+def build(first_build):
+    with Build(first_build) as opened:
         yield opened
 
 
 @pytest.fixture(scope="module")
 def stock(build):
-    series = find(build, "net_stock", {"industry": "C", "asset": "N1132", "price_basis": "constant"})
+    series = find(build, "net_stock", {"industry": "G", "asset": "N112", "price_basis": "constant"})
     return trace(build, series, 2010)
 
 
@@ -29,10 +29,10 @@ def test_addresses(row, column, text):
 
 def test_a_trace_shows_formula_parameters_terms_and_the_cell(build, stock):
     text = "\n".join(lines(build, stock, 1))
-    assert "net_stock[XV C N1132]" in text
+    assert "net_stock[XA G N112]" in text
     assert stock.equation in text
-    assert "asset.rate = 0.3119 (" in text
-    assert "sources/capital_formation.xlsx, sheet 'T1 Investment'" in text
+    assert "asset.rate = 0.0247 (" in text
+    assert "sources/investment.csv, line " in text
     assert "re-performed: " in text
 
 

@@ -14,10 +14,9 @@ YEAR_END = "investment_price/year_end/year_end"
 STOCK = "{}/perpetual_inventory/constant"
 
 GEOMETRIC = {"efficiency": "cohort_geometric", "rate": 0.07}
-WITH_LIFE = {**GEOMETRIC, "gross_life": 3.0, "retirement": "simultaneous"}
-HYPERBOLIC = {
-    "efficiency": "hyperbolic", "life": 3.0, "b": 0.5, "discount_rate": 0.0, "retirement": "simultaneous",
-}  # fmt: skip
+AT_ONCE = {"retirement": "simultaneous", "retirement.distribution": "simultaneous"}
+WITH_LIFE = {**GEOMETRIC, "gross_life": 3.0, **AT_ONCE}
+HYPERBOLIC = {"efficiency": "hyperbolic", "life": 3.0, "b": 0.5, "discount_rate": 0.0, **AT_ONCE}
 
 
 def _params(rules: dict, timing: str = "mid", window: int = 2, initial_stock: str = "steady_state"):
