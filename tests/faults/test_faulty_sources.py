@@ -229,15 +229,21 @@ def test_without_strict_the_warning_is_told_and_the_year_is_left_out(published: 
     without_a_quarter(published)
     result = CliRunner().invoke(main, ["assemble", str(published), "--quiet"])
     assert result.exit_code == 0, result.stderr
-    assert "0 stop, 2 warn" in result.stdout
-    assert "Ready      313 of 315 rows" in result.stdout
+    assert "0 stop, 8 warn" in result.stdout
+    assert "Ready      1,431 of 1,435 rows" in result.stdout
     with open_read(published / "build" / "panel.duckdb") as con:
-        rules = con.execute("select rule, industry, time_period from finding order by rule").fetchall()
-        gaps = con.execute(
-            "select industry, time_period, reason from decomposition_input where not ready order by industry"
+        rules = con.execute(
+            "select rule, sector, industry, time_period from finding where industry = 'M' and severity = 'warn' "
+            "order by rule"
         ).fetchall()
-    assert [(rule, industry) for rule, industry, _ in rules] == [("coverage", "M"), ("incomplete_year", "M")]
-    assert [(industry, year) for industry, year, _ in gaps] == [("M", "2012"), ("_T", "2012")]
+        gaps = con.execute(
+            "select area, sector, industry, time_period, reason from decomposition_input where not ready "
+            "order by sector, industry"
+        ).fetchall()
+    assert rules == [("coverage", "S14", "M", "2012-Q2"), ("incomplete_year", "S14", "M", "2012")]
+    assert [row[:4] for row in gaps] == [
+        ("XV", sector, industry, "2012") for sector in ("S1", "S14") for industry in ("M", "_T")
+    ]
     assert all("no hours worked" in reason for *_, reason in gaps)
     # An unchanged rerun holds the stored findings to --strict as well.
     assert CliRunner().invoke(main, ["assemble", str(published), "--quiet", "--strict"]).exit_code == 5

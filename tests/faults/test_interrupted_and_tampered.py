@@ -127,13 +127,14 @@ def tampered(published: Path) -> Path:
     return published
 
 
-TRACE = ("net_stock", "--area", "XV", "--sector", "S11", "--industry", "C", "--asset", "N1132", "--year", "2015")
+MANUFACTURING = ("net_stock", "--area", "XV", "--sector", "S11", "--industry", "C")
+TRACE = (*MANUFACTURING, "--asset", "N1132", "--year", "2015")
 
 
 def test_trace_notices_a_changed_figure(tampered: Path) -> None:
     result = CliRunner().invoke(main, ["trace", str(tampered), *TRACE])
     assert result.exit_code == 5
-    assert "net_stock[XV C N1132] (perpetual_inventory, constant) in 2015" in result.stderr
+    assert "net_stock[XV S11 C N1132] (perpetual_inventory, constant) in 2015" in result.stderr
     assert "the stored figure differs from its re-performance" in result.stderr
     for part in ("found: ", "expected: ", "to do: "):
         assert part in result.stderr
@@ -141,14 +142,14 @@ def test_trace_notices_a_changed_figure(tampered: Path) -> None:
 
 
 def test_trace_notices_a_changed_figure_on_the_way(tampered: Path) -> None:
-    arguments = ["trace", str(tampered), "net_stock", "--industry", "C", "--asset", "_T", "--year", "2015"]
+    arguments = ["trace", str(tampered), *MANUFACTURING, "--asset", "_T", "--year", "2015"]
     result = CliRunner().invoke(main, arguments)
     assert result.exit_code == 5
-    assert "net_stock[XV C] (perpetual_inventory, constant) in 2015" in result.stderr
+    assert "net_stock[XV S11 C] (perpetual_inventory, constant) in 2015" in result.stderr
 
 
 def test_trace_of_an_untouched_figure_still_works(tampered: Path) -> None:
-    arguments = ["trace", str(tampered), "net_stock", "--industry", "C", "--asset", "N1132", "--year", "2014"]
+    arguments = ["trace", str(tampered), *MANUFACTURING, "--asset", "N1132", "--year", "2014"]
     assert CliRunner().invoke(main, arguments).exit_code == 0
 
 

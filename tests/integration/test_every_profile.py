@@ -1,10 +1,9 @@
 """Every form and every retirement pattern, assembled: against plain sums over scipy's distributions, and traced."""
 
-import json
 import math
-from collections.abc import Callable
+from collections.abc import Callable, Iterator
 from functools import cache
-from pathlib import Path
+from itertools import pairwise
 from typing import NamedTuple
 
 import numpy as np
@@ -12,9 +11,9 @@ import pytest
 from scipy import integrate, optimize, stats
 
 from keelbook.assembly.run import assemble
-from keelbook.audit.verify import verify
+from keelbook.audit.reading import Build
+from keelbook.audit.trace import find, trace
 from keelbook.contracts.retirement import load_retirement
-from keelbook.store.connect import open_read
 
 FIRST, YEARS, WINDOW, GROWTH, RATE = 2000, 15, 5, 0.03, 0.04
 ASSET, LIFE = "N11O", 7.5
@@ -132,9 +131,7 @@ def _weights(case: Case, timing: str, mode: str) -> dict[str, list[float]]:
         else:
             each = {life: price_of(lambda a, life=life: one(a, life)) for life in p}  # type: ignore[misc]
             z = [sum(p[life] * each[life][a] for life in p) for a in range(last + 1)]
-    net = {"start": z[1:], "end": z[:-1], "mid": [(a + b) / 2 for a, b in zip(z, z[1:], strict=False)]}[
-        timing
-    ]
+    net = {"start": z[1:], "end": z[:-1], "mid": [(a + b) / 2 for a, b in pairwise(z)]}[timing]
     gross = [sum(mass for life, mass in p.items() if v + AGE[timing] < life) for v in range(last)]
     return {"gross_stock": gross, "productive_stock": h, "net_stock": net}
 
@@ -181,7 +178,9 @@ trend_window = {{ value = {window}, citation = "test" }}
 
 
 @pytest.fixture(scope="module", params=[("mid", "pooled"), ("end", "by_life"), ("start", "pooled")], ids=str)
-def built(request: pytest.FixtureRequest, tmp_path_factory: pytest.TempPathFactory) -> tuple[Path, str, str]:
+def built(
+    request: pytest.FixtureRequest, tmp_path_factory: pytest.TempPathFactory
+) -> Iterator[tuple[Build, str, str]]:
     timing, mode = request.param
     folder = tmp_path_factory.mktemp("profiles")
     (folder / "sources").mkdir()
@@ -202,45 +201,63 @@ def built(request: pytest.FixtureRequest, tmp_path_factory: pytest.TempPathFacto
     head = "asset,industry,efficiency,age_price,rate,life,declining_balance_rate,b,retirement,discount_rate"
     (folder / "rules" / "assets.csv").write_text("\n".join([f"{head},citation,status", *rules]) + "\n")
     assemble(folder)
-    return folder, timing, mode
+    with Build(folder) as build:
+        yield build, timing, mode
+
+
+LOST = {"consumption_of_fixed_capital": "net_stock", "retirements": "gross_stock"}
 
 
 @pytest.mark.parametrize("name", CASES)
-def test_stocks_are_the_plain_sums_over_vintages(built: tuple[Path, str, str], name: str) -> None:
-    folder, timing, mode = built
+def test_stocks_are_the_plain_sums_over_vintages(built: tuple[Build, str, str], name: str) -> None:
+    build, timing, mode = built
     flow = _investment(INDUSTRIES[name])
     weights = _weights(CASES[name], timing, mode)
-    sql = (
-        "select time_period, value from panel where measure = ? and industry = ? and asset = ? "
-        "and price_basis = 'constant' and method = 'perpetual_inventory' and value is not null order by 1"
+    for measure, stock in LOST.items():
+        weights[measure] = [
+            a - b for a, b in zip([1.0, *weights[stock]], [*weights[stock], 0.0], strict=True)
+        ]
+    for measure, w in weights.items():
+        series = find(build, measure, _key(name))
+        stored = build.rows(
+            "select value from figure where series_id = ? and value is not null order by period",
+            (series.series_id,),
+        )
+        expected = [_stock(w, flow, t) for t in range(YEARS)]
+        np.testing.assert_allclose([v for (v,) in stored], expected, rtol=2e-9, err_msg=measure)
+
+
+def _key(name: str) -> dict[str, str]:
+    return {"industry": INDUSTRIES[name], "asset": ASSET, "price_basis": "constant"}
+
+
+@pytest.mark.parametrize("name", CASES)
+def test_figures_are_reproduced_with_the_weights_that_the_record_gives(
+    built: tuple[Build, str, str], name: str
+) -> None:
+    build, _, _ = built
+    for measure in ("gross_stock", "productive_stock", "net_stock", *LOST):
+        traced = trace(build, find(build, measure, _key(name)), FIRST + YEARS - 1)
+        assert traced.reproduced
+        assert [i.role for i in traced.inputs] == ["investment"] * YEARS + ["opening_stock"]
+        opening = traced.inputs[-1]
+        assert opening.series is not None
+        assert trace(build, opening.series, FIRST - 1).reproduced
+
+
+def test_the_pattern_stands_with_its_own_line_and_citation(built: tuple[Build, str, str]) -> None:
+    build, _, mode = built
+    traced = trace(build, find(build, "net_stock", _key("straight line")), FIRST)
+    used = {choice.name: choice for choice in traced.choices}
+    assert (used["asset.age_price"].value, used["asset.age_price"].file) == (
+        "straight_line",
+        "rules/assets.csv",
     )
-    with open_read(folder / "build" / "panel.duckdb") as con:
-        for measure, w in weights.items():
-            got = [v for _, v in con.execute(sql, [measure, INDUSTRIES[name], ASSET]).fetchall()]
-            expected = [_stock(w, flow, t) for t in range(YEARS)]
-            np.testing.assert_allclose(got, expected, rtol=2e-9, err_msg=measure)
-        for measure, stock in (("consumption_of_fixed_capital", "net_stock"), ("retirements", "gross_stock")):
-            got = [v for _, v in con.execute(sql, [measure, INDUSTRIES[name], ASSET]).fetchall()]
-            lost = [a - b for a, b in zip([1.0, *weights[stock]], [*weights[stock], 0.0], strict=True)]
-            np.testing.assert_allclose(got, [_stock(lost, flow, t) for t in range(YEARS)], rtol=2e-9)
-
-
-def test_every_figure_is_reproduced_from_what_is_stored(built: tuple[Path, str, str]) -> None:
-    folder, _, _ = built
-    assert verify(folder, None)["figures"] > len(CASES) * 5 * YEARS
-
-
-def test_the_pattern_stands_with_its_own_line_and_citation(built: tuple[Path, str, str]) -> None:
-    folder, _, mode = built
-    with open_read(folder / "build" / "panel.duckdb") as con:
-        rows = con.execute(
-            "select p.name, p.setting, p.file, p.citation from method_used m join parameter p using (parameter_id) "
-            "join series s using (series_id) where s.measure = 'net_stock' and s.industry = ? "
-            "and s.method = 'perpetual_inventory'",
-            [INDUSTRIES["straight line"]],
-        ).fetchall()
-    used = {name: (json.loads(setting), file, citation) for name, setting, file, citation in rows}
-    assert used["asset.age_price"][:2] == ("straight_line", "rules/assets.csv")
-    assert used["asset.retirement.sd"][:2] == (0.5, "keelbook/rules/retirement.csv")
-    assert "198 %" in used["asset.retirement.sd"][2]
-    assert used["capital.age_price_mode"][0] == mode
+    assert used["asset.retirement"].file == "rules/assets.csv"
+    assert {name for name in used if name.startswith("asset.retirement.")} == {
+        f"asset.retirement.{name}" for name in ("distribution", "sd", "low", "high")
+    }
+    sd = used["asset.retirement.sd"]
+    assert (sd.value, sd.file) == (0.5, "keelbook/rules/retirement.csv")
+    assert "198 %" in sd.citation
+    assert used["capital.age_price_mode"].value == mode

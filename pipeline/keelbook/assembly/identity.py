@@ -1,6 +1,7 @@
 """What a build is made from, as hashes: same sources, rules and code give the same build id."""
 
 import hashlib
+from concurrent.futures import ThreadPoolExecutor
 from dataclasses import dataclass
 from pathlib import Path
 
@@ -41,8 +42,12 @@ def _files(root: Path, label: str) -> list[tuple[str, Path]]:
 
 
 def _hash(files: list[tuple[str, Path]]) -> str:
-    total = hashlib.sha256()
-    for name, path in files:
-        with path.open("rb") as file:
-            total.update(f"{hashlib.file_digest(file, 'sha256').hexdigest()}  {name}\n".encode())
-    return total.hexdigest()
+    with ThreadPoolExecutor() as pool:
+        digests = list(pool.map(_digest, [path for _, path in files]))
+    lines = [f"{digest}  {name}\n" for digest, (name, _) in zip(digests, files, strict=True)]
+    return hashlib.sha256("".join(lines).encode()).hexdigest()
+
+
+def _digest(path: Path) -> str:
+    with path.open("rb") as file:
+        return hashlib.file_digest(file, "sha256").hexdigest()

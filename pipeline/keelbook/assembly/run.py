@@ -5,7 +5,7 @@ import os
 import socket
 import time
 from collections.abc import Callable, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from pathlib import Path
 from typing import Any
 
@@ -17,11 +17,11 @@ from keelbook import __version__, findings
 from keelbook.assembly import plan
 from keelbook.assembly.declaration import Assembly, load_assembly
 from keelbook.assembly.identity import Identity, identify
-from keelbook.blocks import SeriesIndex
+from keelbook.blocks import Block, SeriesIndex
 from keelbook.contracts.measures import load_measures
 from keelbook.contracts.parameters import load_parameters
 from keelbook.contracts.screening_rules import load_screening_rules
-from keelbook.contracts.tables import Table, load_tables
+from keelbook.contracts.tables import load_tables
 from keelbook.errors import Problem, StopFindings
 from keelbook.frames import coded, constant
 from keelbook.stages import panel
@@ -122,7 +122,12 @@ def assemble(
             writer = Writer(
                 panel_file, evidence, tables, assembly.lists, load_measures(), _currencies(assembly)
             )
-            rows = _build(assembly, taken, writer, evidence, tables, found, log)
+            observations = len(taken.observations)
+            observed, taken = _observed(assembly, taken), replace(taken, observations=pd.DataFrame())
+            _write_observations(observed, evidence, tables, assembly)
+            observed = [item.without_rows() for item in observed]
+            rows = [(0, "intake", 0, observations, 0, "")]
+            rows += _build(assembly, observed, writer, found, log)
             everything = _judged(assembly, findings.concat(found))
             _stop_if_refused(everything, strict, evidence, tables, work, target, log, panel_file)
             stage_rows = pd.DataFrame(rows, columns=list(tables["stage_run"].column)).astype(
@@ -210,33 +215,37 @@ def _screened(con: duckdb.DuckDBPyConnection, assembly: Assembly, taken: Intake)
     return screen(taken.observations, load_screening_rules(assembly.folder), context)
 
 
+def _observed(assembly: Assembly, taken: Intake) -> list[ObservedBlock]:
+    params = plan.harmonise_params(assembly, load_parameters(assembly))
+    return observed_blocks(taken.observations, plan.code_table(assembly), _years(assembly), params)
+
+
+def _years(assembly: Assembly) -> range:
+    """Return the period axis of every block: one year is kept before the first, for opening stocks."""
+    return range(assembly.period[0] - 1, assembly.period[1] + 1)
+
+
 def _build(
     assembly: Assembly,
-    taken: Intake,
+    observed: Sequence[ObservedBlock],
     writer: Writer,
-    evidence: duckdb.DuckDBPyConnection,
-    tables: dict[str, Table] | Any,
     found: list[pd.DataFrame],
     log: Log,
 ) -> list[tuple[Any, ...]]:
-    """Run every stage, area by area, and write what they give. Returns the rows of `stage_run`."""
+    """Run every stage, some areas at a time, and write what they give. Returns the rows of `stage_run`."""
     parameters = load_parameters(assembly)
-    years = range(assembly.period[0] - 1, assembly.period[1] + 1)
     params = plan.harmonise_params(assembly, parameters)
-    observed = observed_blocks(taken.observations, plan.code_table(assembly), years, params)
-    _write_observations(observed, evidence, tables, assembly)
-    tally = {"intake": [0, len(taken.observations), 0]}
-    delivered = harmonise(observed, years, params)
+    delivered = harmonise(observed, _years(assembly), params)
     found.append(findings.frame(delivered.findings))
-    tally["harmonise"] = [0, 0, len(delivered.findings)]
+    tally = {"harmonise": [0, 0, len(delivered.findings)]}
     for stage in STAGES:
         tally[stage.name] = [0, 0, 0]
     log.step("harmonised")
     by_stage = plan.stage_params(assembly, parameters)
     book = Book(delivered.blocks)
-    areas = np.unique(np.concatenate([b.series.digit("area") for b in book] or [np.zeros(0, np.int64)]))
-    for number, area in enumerate(areas, 1):
-        mine = Book(block.take(_slice(block.series, int(area))) for block in book)
+    batches = _batches(list(book))
+    for number, (first, last) in enumerate(batches, 1):
+        mine = Book(block.take(_slice(block.series, first, last)) for block in book)
         _count(tally["harmonise"], list(mine))
         for stage in STAGES:
             if not all(mine.get(key) is not None for key in stage.needs):
@@ -258,17 +267,38 @@ def _build(
         ):
             if len(frame):
                 writer.insert(name, frame)
-        log.step(f"computed area {number} of {len(areas)}", area=assembly.lists.codes("area")[int(area)])
+        log.step(f"computed and wrote areas, batch {number} of {len(batches)}")
     return [
         (position, name, series, figures, count, "")
-        for position, (name, (series, figures, count)) in enumerate(tally.items())
+        for position, (name, (series, figures, count)) in enumerate(tally.items(), 1)
     ]
 
 
-def _slice(series: SeriesIndex, area: int) -> Any:
-    """Return the positions of one area: series are sorted by area first, so they lie together."""
+BATCH = 2000
+"""Series of the largest input that are computed together: fewer cost time for each batch, more cost memory."""
+
+
+def _batches(blocks: Sequence[Block]) -> list[tuple[int, int]]:
+    """Return spans of areas (first, last) that hold about `BATCH` series of the largest block each."""
+    sizes: dict[int, int] = {}
+    for block in blocks:
+        for area, count in zip(*np.unique(block.series.digit("area"), return_counts=True), strict=True):
+            sizes[int(area)] = max(sizes.get(int(area), 0), int(count))
+    spans: list[tuple[int, int]] = []
+    held = BATCH
+    for area in sorted(sizes):
+        if held + sizes[area] > BATCH:
+            spans.append((area, area))
+            held = 0
+        spans[-1] = (spans[-1][0], area)
+        held += sizes[area]
+    return spans
+
+
+def _slice(series: SeriesIndex, first: int, last: int) -> Any:
+    """Return the positions of some areas: series are sorted by area first, so they lie together."""
     digits = series.digit("area")
-    return np.arange(*np.searchsorted(digits, [area, area + 1]))
+    return np.arange(*np.searchsorted(digits, [first, last + 1]))
 
 
 def _count(tally: list[int], blocks: Sequence[Any]) -> None:

@@ -59,9 +59,9 @@ def find(build: Build, measure: str, wanted: Mapping[str, str | None]) -> Series
         DeclarationError: no such series (with the nearest names), or several (with the choices).
     """
     given = {name: value for name, value in wanted.items() if value is not None}
-    _check_codes(build, measure, given)
     found = build.series({"measure": measure, **given})
     if not found:
+        _check_codes(build, measure, given)
         raise DeclarationError(
             Problem(
                 f"no series of {measure} with {_text(given)}",

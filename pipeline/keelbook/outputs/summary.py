@@ -28,7 +28,7 @@ def summary(report: Report, place: Path) -> list[str]:
     assembly = report.assembly
     lines = [
         shown(assembly.title),
-        f"{', '.join(assembly.lists.codes('area'))}, {assembly.period[0]}-{assembly.period[1]}, reference year "
+        f"{_areas(assembly.lists.codes('area'))}, {assembly.period[0]}-{assembly.period[1]}, reference year "
         f"{assembly.reference_year}, million {assembly.currency}",
         "",
     ]
@@ -60,6 +60,11 @@ def summary(report: Report, place: Path) -> list[str]:
 
 def _figures(stages: pd.DataFrame, name: str) -> int:
     return int(stages.loc[stages["stage"] == name, "figures"].sum())
+
+
+def _areas(codes: tuple[str, ...], most: int = 8) -> str:
+    listed = ", ".join(codes[:most])
+    return listed if len(codes) <= most else f"{listed} and {len(codes) - most} more areas"
 
 
 def _why(found: pd.DataFrame, stage: str) -> str:

@@ -127,6 +127,10 @@ class ObservedBlock:
     rows: pd.DataFrame
     column: I4
 
+    def without_rows(self) -> "ObservedBlock":
+        """Return the block alone, so that the observations need not stay in memory."""
+        return replace(self, rows=self.rows.iloc[:0], column=self.column[:0])
+
 
 def observed_blocks(
     frame: pd.DataFrame, table: CodeTable, years: range, params: HarmoniseParams

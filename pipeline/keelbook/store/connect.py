@@ -5,11 +5,15 @@ from pathlib import Path
 
 import duckdb
 
+MEMORY = "1GB"
+"""What one database may keep in memory while it is written; larger does not make it faster."""
+
 
 def open_new(path: Path, readable: Iterable[Path] = ()) -> duckdb.DuckDBPyConnection:
     """Open a database for writing; only the named files may be read from it, and that cannot be changed later."""
     con = duckdb.connect(str(path))
     con.execute("set enable_progress_bar = false")
+    con.execute(f"set memory_limit = '{MEMORY}'")
     con.execute("set preserve_insertion_order = true")
     con.execute("set autoinstall_known_extensions = false")
     con.execute("set autoload_known_extensions = false")

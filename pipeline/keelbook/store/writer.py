@@ -2,7 +2,7 @@
 
 import json
 from collections.abc import Iterable, Mapping
-from typing import Any
+from typing import Any, NamedTuple
 
 import duckdb
 import numpy as np
@@ -10,8 +10,6 @@ import pandas as pd
 
 from keelbook.blocks import (
     DIMS,
-    F8,
-    I1,
     I8,
     OWN_PERIOD,
     Block,
@@ -19,12 +17,13 @@ from keelbook.blocks import (
     Choice,
     Derivation,
     MethodSet,
+    SeriesIndex,
     status_of,
 )
 from keelbook.contracts.codes import CodeLists
 from keelbook.contracts.measures import Measure
 from keelbook.contracts.tables import Table
-from keelbook.frames import coded, constant
+from keelbook.frames import coded
 from keelbook.stages.catalogue import FORMULAS
 from keelbook.store.append import append
 
@@ -75,13 +74,13 @@ class Writer:
             self._series_count += len(block.series)
         if not numbered:
             return
-        self.insert("series", pd.concat([self._series(b, at) for b, at in numbered.values()]))
-        edges = [frame for b, at in numbered.values() for frame in _edges(b, at, numbered)]
+        self.insert("series", self._series(list(numbered.values())))
+        edges = [rows for b, at in numbered.values() for rows in _edges(b, at, numbered)]
         if edges:
-            self.insert("edge", pd.concat(edges))
+            self.insert("edge", _edge_frame(edges))
         for block, _ in numbered.values():
             self._hidden |= _hidden_places(block)
-        figures = pd.concat([_figures(b, at) for b, at in numbered.values()])
+        figures = _figures(list(numbered.values()))
         hidden = figures["conf_status"].to_numpy() > 0
         if hidden.any():
             withheld = figures.loc[hidden, ["series_id", "period", "value"]]
@@ -126,35 +125,49 @@ class Writer:
         self.insert("code", _typed(codes, self._tables["code"]))
         self._panel.execute(VIEWS)
 
-    def _series(self, block: Block, first: int) -> pd.DataFrame:
-        n = len(block.series)
-        measure = self._measures[block.key.measure]
-        columns: dict[str, Any] = {"series_id": np.arange(first, first + n, dtype=np.int32)}
+    def _series(self, numbered: list[tuple[Block, int]]) -> pd.DataFrame:
+        """Return the rows of `series` of all blocks, text columns as codes over one list of names."""
+        blocks = [block for block, _ in numbered]
+        table = blocks[0].series.table
+        key = np.concatenate([b.series.key for b in blocks])
+        joined = SeriesIndex(table, key)
+        sizes = [len(b.series) for b in blocks]
+        kinds = [self._measures[b.key.measure] for b in blocks]
+        columns: dict[str, Any] = {
+            "series_id": np.concatenate([np.arange(at, at + len(b.series)) for b, at in numbered]).astype(
+                np.int32
+            )
+        }
         for dim in DIMS:
-            codes = block.series.digit(dim)
-            columns[dim] = coded(codes, block.series.table.codes[dim])
-        for name, text in zip(("measure", "method", "price_basis"), block.key, strict=True):
-            columns[name] = constant(text, n)
-        columns["unit"] = self._unit(block, measure)
-        columns["unit_mult"] = np.full(n, measure.unit_mult, np.int8)
-        columns["chosen"], columns["part"] = block.chosen, block.part
-        columns["formula_id"] = self._numbers(block.origin.derivations, self._formulas)[
-            block.origin.derivation
-        ]
-        for choices in block.origin.sets:
-            for choice in choices:
-                self._parameter(choice)
-        columns["method_set"] = self._numbers(block.origin.sets, self._sets)[block.origin.set]
+            columns[dim] = coded(joined.digit(dim), table.codes[dim])
+        for i, name in enumerate(("measure", "method", "price_basis")):
+            texts = [b.key[i] for b in blocks]
+            names = list(dict.fromkeys(texts))
+            columns[name] = coded(np.repeat([names.index(text) for text in texts], sizes), names)
+        columns["unit"] = self._units(joined, kinds, sizes)
+        columns["unit_mult"] = np.repeat([kind.unit_mult for kind in kinds], sizes).astype(np.int8)
+        columns["chosen"] = np.concatenate([b.chosen for b in blocks])
+        columns["part"] = np.concatenate([b.part for b in blocks])
+        columns["formula_id"] = np.concatenate(
+            [self._numbers(b.origin.derivations, self._formulas)[b.origin.derivation] for b in blocks]
+        )
+        for block in blocks:
+            for choices in block.origin.sets:
+                for choice in choices:
+                    self._parameter(choice)
+        columns["method_set"] = np.concatenate(
+            [self._numbers(b.origin.sets, self._sets)[b.origin.set] for b in blocks]
+        )
         return pd.DataFrame(columns)
 
-    def _unit(self, block: Block, measure: Measure) -> "pd.Categorical[Any]":
-        if measure.unit != "currency":
-            return constant(measure.unit, len(block.series))
-        areas = block.series.table.codes["area"]
-        names = [self._currency[area] for area in areas]
-        distinct = sorted(set(names))
-        position = np.array([distinct.index(name) for name in names])
-        return coded(position[block.series.digit("area")], distinct)
+    def _units(self, series: SeriesIndex, kinds: list[Measure], sizes: list[int]) -> "pd.Categorical[Any]":
+        """Return the unit of every series: the currency of its area where the measure is in currency."""
+        currencies = [self._currency[area] for area in series.table.codes["area"]]
+        names = list(dict.fromkeys([*currencies, *(kind.unit for kind in kinds)]))
+        of_area = np.array([names.index(name) for name in currencies])[series.digit("area")]
+        of_kind = np.repeat([names.index(kind.unit) for kind in kinds], sizes)
+        in_currency = np.repeat([kind.unit == "currency" for kind in kinds], sizes)
+        return coded(np.where(in_currency, of_area, of_kind), names)
 
     @staticmethod
     def _numbers(items: Iterable[Any], known: dict[Any, int]) -> Any:
@@ -164,10 +177,6 @@ class Writer:
         return self._parameters.setdefault(choice, len(self._parameters))
 
     def _formula_rows(self) -> pd.DataFrame:
-        used: dict[str, set[str]] = {}
-        for choices in self._sets:
-            for choice in choices:
-                used.setdefault(choice.name, set())
         rows = []
         for derivation, number in self._formulas.items():
             formula = FORMULAS[derivation.formula]
@@ -186,6 +195,16 @@ class Writer:
 
 
 WITHHELD = "withheld: figures of this area and industry are confidential; the evidence file has the details"
+
+FIGURE_COLUMNS = (
+    "series_id",
+    "period",
+    "value",
+    "obs_status",
+    "conf_status",
+    "imputed_part",
+    "assumed_part",
+)
 
 PANEL_TABLES = (
     "series",
@@ -215,7 +234,17 @@ def _typed(rows: list[tuple[Any, ...]], table: Table) -> pd.DataFrame:
     return frame.astype({name: kinds[column.type] for name, column in table.column.items()})
 
 
-def _edges(block: Block, first: int, numbered: Mapping[BlockKey, tuple[Block, int]]) -> list[pd.DataFrame]:
+class _EdgeRows(NamedTuple):
+    """Edges of one role: numbers of the outputs, their periods or None, numbers and periods of the inputs."""
+
+    role: str
+    series: I8
+    period: I8 | None
+    target: I8
+    input_period: I8
+
+
+def _edges(block: Block, first: int, numbered: Mapping[BlockKey, tuple[Block, int]]) -> list[_EdgeRows]:
     out = []
     for role, edges in block.origin.edges.items():
         target = np.full(len(block.series), -1, np.int64)
@@ -225,29 +254,31 @@ def _edges(block: Block, first: int, numbered: Mapping[BlockKey, tuple[Block, in
                 target[mine] = at + number[mine]
         linked = np.flatnonzero(target >= 0)
         period = np.full(len(linked), OWN_PERIOD) if edges.period is None else edges.period[linked]
-        out.append(_edge_rows(first + linked, None, role, target[linked], period))
+        out.append(_EdgeRows(role, first + linked, None, target[linked], period))
     fills = block.origin.fills
     if fills is not None and len(fills.column):
         source, at = numbered[fills.block]
         number = at + source.series.locate(block.series.key[fills.column])
         for role, input_period in (("before", fills.before), ("after", fills.after)):
-            out.append(_edge_rows(first + fills.column, fills.period, role, number, input_period))
+            out.append(_EdgeRows(role, first + fills.column, fills.period, number, input_period))
     return out
 
 
-def _edge_rows(series: I8, period: I8 | None, role: str, target: I8, input_period: I8) -> pd.DataFrame:
-    none = np.zeros(len(series), np.int16)
+def _edge_frame(edges: list[_EdgeRows]) -> pd.DataFrame:
+    roles = list(dict.fromkeys(rows.role for rows in edges))
+    sizes = [len(rows.series) for rows in edges]
+    period = [np.full(len(r.series), OWN_PERIOD) if r.period is None else r.period for r in edges]
+
+    def nullable(values: I8) -> pd.arrays.IntegerArray:
+        return pd.arrays.IntegerArray(values.astype(np.int16), np.asarray(values == OWN_PERIOD))
+
     return pd.DataFrame(
         {
-            "series_id": series.astype(np.int32),
-            "period": pd.arrays.IntegerArray(
-                none if period is None else period.astype(np.int16), np.full(len(series), period is None)
-            ),
-            "role": constant(role, len(series)),
-            "input_series_id": target.astype(np.int32),
-            "input_period": pd.arrays.IntegerArray(
-                input_period.astype(np.int16), np.asarray(input_period == OWN_PERIOD)
-            ),
+            "series_id": np.concatenate([r.series for r in edges]).astype(np.int32),
+            "period": nullable(np.concatenate(period)),
+            "role": coded(np.repeat([roles.index(r.role) for r in edges], sizes), roles),
+            "input_series_id": np.concatenate([r.target for r in edges]).astype(np.int32),
+            "input_period": nullable(np.concatenate([r.input_period for r in edges])),
         }
     )
 
@@ -274,23 +305,23 @@ def _hidden_places(block: Block) -> set[tuple[str, str]]:
     return {(label["area"], label["industry"]) for label in labels}
 
 
-def _figures(block: Block, first: int) -> pd.DataFrame:
-    """Return the figures of a block series by series, so that one series lies together in the file."""
-    status = status_of(block).T
-    kept = np.isfinite(block.value.T) | (status >= 0)
-    series, period = np.nonzero(kept)
-
-    def column(x: F8 | I1 | Any, dtype: Any) -> Any:
-        return np.zeros(len(series), dtype) if x is None else x.T[kept].astype(dtype, copy=False)
-
-    return pd.DataFrame(
-        {
-            "series_id": (first + series).astype(np.int32),
-            "period": (block.periods.start + period).astype(np.int16),
-            "value": block.value.T[kept],
-            "obs_status": status[kept],
-            "conf_status": column(block.conf, np.int8),
-            "imputed_part": column(block.imputed, np.float32),
-            "assumed_part": column(block.assumed, np.float32),
-        }
-    )
+def _figures(numbered: list[tuple[Block, int]]) -> pd.DataFrame:
+    """Return the figures of all blocks series by series, so that one series lies together in the file."""
+    columns: dict[str, list[Any]] = {name: [] for name in FIGURE_COLUMNS}
+    for block, first in numbered:
+        status = status_of(block).T
+        kept = np.isfinite(block.value.T) | (status >= 0)
+        series, period = np.nonzero(kept)
+        columns["series_id"].append((first + series).astype(np.int32))
+        columns["period"].append((block.periods.start + period).astype(np.int16))
+        columns["value"].append(block.value.T[kept])
+        columns["obs_status"].append(status[kept])
+        for name, values, dtype in (
+            ("conf_status", block.conf, np.int8),
+            ("imputed_part", block.imputed, np.float32),
+            ("assumed_part", block.assumed, np.float32),
+        ):
+            columns[name].append(
+                np.zeros(len(series), dtype) if values is None else values.T[kept].astype(dtype)
+            )
+    return pd.DataFrame({name: np.concatenate(parts) for name, parts in columns.items()})

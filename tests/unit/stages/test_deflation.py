@@ -12,6 +12,12 @@ CURRENT = "investment/delivered/current"
 PRICE = "investment_price/rebased/index"
 
 
+def _volumes(book):
+    """Return the deflated series, without the totals made of them."""
+    volume = get(book, "investment/deflated/constant")
+    return volume.take(volume.part)
+
+
 def _deflated(*blocks, order=ORDER):
     return run_stage(deflation.STAGE, params("deflation", order=order), *blocks)
 
@@ -21,7 +27,7 @@ def test_a_volume_is_the_value_divided_by_the_price():
         block(CURRENT, {"industry=A asset=N112": [80.0, 100, 150]}),
         block(PRICE, {"industry=A asset=N112": [0.8, 1, 1.2]}),
     )
-    volume = get(book, "investment/deflated/constant")
+    volume = _volumes(book)
     np.testing.assert_allclose(column(volume, "industry=A asset=N112"), [100, 100, 125], rtol=1e-15)
     assert not findings
     assert volume.origin.sets[volume.origin.set[0]][0].name == "deflation.order"
@@ -50,7 +56,7 @@ ALL_PRICES = {
 def test_the_first_index_of_the_declared_order_is_used_and_recorded(order, series, divisor):
     prices = block(PRICE, ALL_PRICES)
     book, _ = _deflated(block(CURRENT, {series: [210.0]}), prices, order=order)
-    volume = get(book, "investment/deflated/constant")
+    volume = _volumes(book)
     assert column(volume, series)[0] == 210 / divisor
     used = {value[0]: number(s) for s, value in ALL_PRICES.items()}
     edges = volume.origin.edges["price"]
@@ -93,9 +99,7 @@ def test_a_year_without_a_price_is_told_and_has_no_volume():
         block(CURRENT, {"industry=A asset=N112": [10.0, 20, NAN], "industry=C asset=N113": [1.0, 1, 1]}),
         block(PRICE, {"asset=N112": [1.0, NAN, NAN], "asset=N113": [1.0, 1, 1]}),
     )
-    np.testing.assert_array_equal(
-        column(get(book, "investment/deflated/constant"), "industry=A asset=N112"), [10, NAN, NAN]
-    )
+    np.testing.assert_array_equal(column(_volumes(book), "industry=A asset=N112"), [10, NAN, NAN])
     (finding,) = findings
     assert (finding["rule"], finding["severity"]) == ("price_missing", "warn")
     assert (finding["industry"], finding["asset"], finding["time_period"]) == ("A", "N112", "2011")
@@ -107,7 +111,7 @@ def test_delivered_volumes_are_not_deflated_again():
         block("investment/delivered/constant", {"industry=A asset=N112": [7.0]}),
         block(PRICE, {"asset=N112": [2.0]}),
     )
-    volume = get(book, "investment/deflated/constant")
+    volume = _volumes(book)
     assert not holds(volume, "industry=A asset=N112")
     assert column(volume, "industry=C asset=N112")[0] == 5
 
@@ -134,8 +138,16 @@ def test_a_group_beside_its_assets_is_not_deflated():
     current = block(CURRENT, {"industry=A asset=N112": [1.0], "industry=A asset=N11": [1.0]})
     current.part[current.series.is_code("asset", "N11")] = False
     book, findings = _deflated(current, block(PRICE, {"asset=N112": [2.0], "asset=N11": [2.0]}))
-    volume = get(book, "investment/deflated/constant")
+    volume = _volumes(book)
     assert column(volume, "industry=A asset=N112")[0] == 0.5
-    assert volume.part.all()
-    assert not holds(volume, "industry=A asset=N11")
+    assert not holds(get(book, "investment/deflated/constant"), "industry=A asset=N11")
     assert not findings
+
+
+def test_volumes_add_up_to_totals_at_reference_year_prices():
+    book, _ = _deflated(
+        block(CURRENT, {"industry=A asset=N112": [10.0], "industry=A asset=N113": [9.0]}),
+        block(PRICE, {"asset=N112": [2.0], "asset=N113": [3.0]}),
+    )
+    total = get(book, "investment/*/constant")
+    assert column(total, "industry=A asset=_T")[0] == 10 / 2 + 9 / 3
