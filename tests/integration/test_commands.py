@@ -11,6 +11,12 @@ import pytest
 from click.testing import CliRunner
 
 from keelbook.cli.main import main
+from keelbook.contracts.parameters import load_parameters
+from keelbook.contracts.retirement import load_retirement
+from keelbook.methods.profiles import AGE_PRICE_FORMS, EFFICIENCY_FORMS
+from keelbook.methods.retirement import RETIREMENT
+from keelbook.outputs.catalogue import TITLES
+from keelbook.stages.catalogue import FORMULAS
 
 Run = Callable[..., "subprocess.CompletedProcess[str]"]
 
@@ -193,11 +199,29 @@ def test_screen_reads_and_writes_nothing(copy_fixture: Callable[[str, Path], Pat
     assert sorted(folder.rglob("*")) == before
 
 
-def test_methods_lists_every_formula_with_its_source() -> None:
+def test_methods_lists_every_method_with_its_source() -> None:
     rows = reply("methods")
-    assert len(rows) > 40
-    assert all(row["name"] and row["equation"] and row["citation"] and row["inputs"] for row in rows)
-    assert "net_stock_of_vintages" in ask("methods")
+    assert all(row["name"] and row["equation"] and row["citation"] for row in rows)
+    names = {kind: {row["name"] for row in rows if row["kind"] == kind} for kind in TITLES}
+    assert names["formula"] == set(FORMULAS)
+    assert names["efficiency"] == {"cohort_geometric", *EFFICIENCY_FORMS}
+    assert names["age_price"] == set(AGE_PRICE_FORMS)
+    assert names["distribution"] == set(RETIREMENT)
+    assert names["retirement"] == set(load_retirement())
+    assert names["choice"] == {parameter.name for parameter in load_parameters().all()}
+    by_name = {(row["kind"], row["name"]): row for row in rows}
+    assert by_name["formula", "net_stock_of_vintages"]["inputs"]
+    assert by_name["efficiency", "hyperbolic"]["equation"].startswith("(L - a) / (L - b a) for a < L")
+    assert set(by_name["distribution", "weibull"]["parameters"]) == {"shape", "high"}
+    assert "its cuts leave out 5.00%" in by_name["retirement", "truncated_normal"]["equation"]
+    assert by_name["choice", "capital.timing"]["parameters"] == {
+        "may be": "choice of start, mid, end",
+        "is": "mid",
+    }
+    text = ask("methods")
+    for row in rows:
+        assert row["name"] in text
+        assert row["citation"] in text
 
 
 def test_a_new_assembly_assembles_as_it_stands(tmp_path: Path, keelbook: Run) -> None:

@@ -1,6 +1,6 @@
 """Trace: re-perform one figure from its stored inputs, and explain it term by term down to the source cell."""
 
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, field
 from typing import Any
 
@@ -230,7 +230,7 @@ def _line_up(build: Build, series: Series, formula: Formula) -> list[_Line]:
             number, year = found if found is not None else (-1, None)
             lines.append(_line(build, link, [_by_number(build, number)], year))
         else:
-            lines.append(_line(build, link, [_at(build, member, link) for member in members]))
+            lines.append(_line(build, link, _at(build, members, link)))
     return lines
 
 
@@ -241,9 +241,13 @@ def _members(build: Build, series: Series, link: Link) -> list[Series]:
     return build.series(with_method(where, link.method))
 
 
-def _at(build: Build, member: Series, link: Link) -> Series | None:
-    found = build.series(with_method(projected(member.key, link.project, link), link.method))
-    return found[0] if found else None
+def _at(build: Build, members: Sequence[Series], link: Link) -> list[Series | None]:
+    """Return the series that one role reads for every member, found in one query."""
+    wanted = [projected(member.key, link.project, link) for member in members]
+    shared = {dim: wanted[0][dim] for dim in DIMS if len({key[dim] for key in wanted}) == 1}
+    where = {**shared, "measure": link.measure, "price_basis": link.price_basis}
+    found = {tuple(s.key[dim] for dim in DIMS): s for s in build.series(with_method(where, link.method))}
+    return [found.get(tuple(key[dim] for dim in DIMS)) for key in wanted]
 
 
 def _by_number(build: Build, number: int) -> Series | None:

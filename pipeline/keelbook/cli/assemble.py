@@ -1,5 +1,6 @@
 """`assemble` and `screen`: run the declared production, or only look at its sources."""
 
+import sys
 from pathlib import Path
 
 import click
@@ -50,6 +51,7 @@ def assemble(folder: Path, out: Path | None, strict: bool, quiet: bool, log_json
 def screen(folder: Path, strict: bool, json_: bool) -> None:
     """Read and screen the sources of the assembly in FOLDER; write nothing."""
     from keelbook.assembly.run import as_problem, raise_if_refused, screen_only
+    from keelbook.errors import StopFindings
     from keelbook.outputs.text import plural, shown
 
     assembly, taken, found = screen_only(folder)
@@ -71,7 +73,13 @@ def screen(folder: Path, strict: bool, json_: bool) -> None:
             click.echo(shown_lines(str(as_problem(row))))
         if not len(found):
             click.echo("no findings")
-    raise_if_refused(found, strict, folder)
+    try:
+        raise_if_refused(found, strict, folder)
+    except StopFindings as error:
+        if not json_:
+            raise
+        # The findings are in the JSON already: a second document would make it unreadable.
+        sys.exit(error.exit_code)
 
 
 def shown_lines(text: str) -> str:

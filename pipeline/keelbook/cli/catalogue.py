@@ -1,4 +1,4 @@
-"""`methods`: every formula that figures can be made by."""
+"""`methods`: every method that figures can be made by."""
 
 import click
 
@@ -9,20 +9,12 @@ from keelbook.cli.common import as_json, dump, reports_errors
 @as_json
 @reports_errors
 def methods(json_: bool) -> None:
-    """List every formula: equation, inputs and published source."""
-    from keelbook.stages.catalogue import FORMULAS
+    """List every formula, profile, retirement pattern and choice: equation, parameters, published source."""
+    from keelbook.outputs.catalogue import catalogue, catalogue_lines
 
-    rows = [
-        {
-            "name": f.name,
-            "equation": f.equation,
-            "inputs": [role.name for role in f.roles],
-            "citation": f.citation,
-        }
-        for f in FORMULAS.values()
-    ]
+    rows = catalogue()
     if json_:
         dump(rows)
         return
-    for row in rows:
-        click.echo(f"{row['name']}\n    {row['equation']}\n    source: {row['citation']}")
+    for line in catalogue_lines(rows):
+        click.echo(line)

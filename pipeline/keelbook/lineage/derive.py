@@ -203,7 +203,7 @@ def derive(
     value = rule.compute(*x)
     kinds = [
         [
-            getattr(item, kind) if role.counted else None
+            getattr(item, kind) if role.counted else _uncounted(formula, item.value)
             for role, item in zip(formula.roles, lined, strict=True)
         ]
         for kind in ("imputed", "assumed")
@@ -230,6 +230,11 @@ def derive(
         imputed=imputed,
         assumed=assumed,
     )
+
+
+def _uncounted(formula: Formula, like: F8) -> F4 | None:
+    """Return the parts of an input that is a parameter: in a pointwise rule it rests on nothing (NaN)."""
+    return np.broadcast_to(np.float32(np.nan), like.shape) if formula.kind == "each" else None
 
 
 def _derivation(

@@ -161,6 +161,7 @@ class Lag:
         rest = float(kernel.remainder(growth[o], t - o)[-1, 0])
         value = float(opening[o, 0])
         yield Term(1, o, n, value, rest, rest * value)
+        yield Term(2, o, n, float(growth[o, 0]), 0.0, 0.0)
 
     def combine(self, x: Sequence[F8], terms: Sequence[Term]) -> float:
         return float(np.sum([t.contribution for t in terms]))

@@ -23,7 +23,10 @@ Parts = Sequence[F4 | None]
 
 
 class Term(NamedTuple):
-    """One input of one figure: position of the role, row and column in that input, and what it does."""
+    """One input of one figure: position of the role, row and column in that input, and what it does.
+
+    An input that only makes the weights of others has weight 0 itself.
+    """
 
     role: int
     row: int
@@ -271,6 +274,10 @@ class Sum:
         for m in self.groups.members(group):
             v, w = float(value[row, m]), float(weight[row, m])
             yield Term(0, row, int(m), v, w, v * w)
+        if self.weight is not None:
+            for role in range(1, len(x)):
+                for m in self.groups.members(group):
+                    yield Term(role, row, int(m), float(x[role][row, m]), 0.0, 0.0)
 
     def combine(self, x: Sequence[F8], terms: Sequence[Term]) -> float:
         return float(np.sum([t.contribution for t in terms]))

@@ -204,6 +204,8 @@ def efficiency_from_age_price(z: F8, discount_rate: float) -> F8:
     Returns:
         (A + 1,) efficiency relative to a new asset.
 
+    Source: the formula of `age_price` solved for h.
+
     Raises:
         ValueError: discount rate <= -1; NaN; a new asset that earns nothing (h(0) <= 0 before scaling).
     """

@@ -32,7 +32,10 @@ _NODES, _NODE_WEIGHTS = np.polynomial.legendre.leggauss(16)
 
 
 def simultaneous(mean_life: float) -> tuple[I8, F8]:
-    """Return the one whole life, or the two neighbours of a fractional mean, weighted so that the mean is kept."""
+    """Return the one whole life, or the two neighbours of a fractional mean, weighted so that the mean is kept.
+
+    Source: OECD, Measuring Capital (2001, 2009), retirement patterns (form cited from memory).
+    """
     whole = int(np.floor(mean_life))
     part = mean_life - whole
     if part == 0:
@@ -147,6 +150,7 @@ def winfrey_moment(*, sd: float) -> Spread:
 
     The exponent follows from the moment, not from a published curve, hence a name of its own. `sd` is at most
     1 / sqrt(3), where the density is flat.
+    Source: R. Winfrey's symmetric form (from memory); the exponent has no published source.
     """
     sd = require("sd", sd, low=SMALLEST_SPREAD, high=1 / math.sqrt(3))
     return winfrey(exponent=max(0.0, (1 / sd**2 - 3) / 2))

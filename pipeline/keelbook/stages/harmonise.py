@@ -23,6 +23,7 @@ from keelbook.blocks import (
     Origin,
     SeriesIndex,
     merge,
+    status_of,
 )
 from keelbook.contracts.measures import Measure
 from keelbook.lineage.derive import Given, derive, given, in_year
@@ -30,7 +31,7 @@ from keelbook.lineage.formula import Formula, Role, Setting
 from keelbook.lineage.primitives import Each, Span, Spans
 from keelbook.stages.base import CHOSEN, Book, Result, note
 from keelbook.stages.filling import fill, link
-from keelbook.stages.totals import Grouping, totals, with_parts
+from keelbook.stages.totals import Grouping, total_of, totals, with_parts
 
 QUARTERS = 4
 
@@ -219,7 +220,9 @@ def harmonise(observed: Sequence[ObservedBlock], years: range, params: Harmonise
     """Return the delivered figures, annual and in the units of their measures, and totals from parts."""
     findings: list[dict[str, Any]] = []
     by_key: dict[BlockKey, list[Block]] = {}
-    for item in observed:
+    joined, problems = _joined(observed)
+    findings.extend(problems)
+    for item in joined:
         block = _annual(item, years, params)
         by_key.setdefault(block.key, []).append(block)
         findings.extend(_incomplete_years(item, block))
@@ -240,6 +243,65 @@ def harmonise(observed: Sequence[ObservedBlock], years: range, params: Harmonise
             whole = chosen if len(forms) > 1 else forms[0]
             blocks.extend(totals(whole, summed(params.measures[key.measure]), "sum_of_parts"))
     return Result(blocks, findings)
+
+
+def _joined(observed: Sequence[ObservedBlock]) -> tuple[list[ObservedBlock], list[dict[str, Any]]]:
+    """Return the observations with every series in one block: an old and a new file are put together in time.
+
+    That needs one frequency and one unit; otherwise the later source's series is left out with a stop finding.
+    """
+    out: list[ObservedBlock] = []
+    findings: list[dict[str, Any]] = []
+    for item in observed:
+        for at, earlier in enumerate(out):
+            if earlier.block.key != item.block.key:
+                continue
+            again = earlier.block.series.locate(item.block.series.key) >= 0
+            if not again.any():
+                continue
+            if (earlier.frequency, earlier.unit_mult) == (item.frequency, item.unit_mult):
+                out[at] = replace(earlier, block=_beside_in_time(earlier.block, item.block.take(again)))
+            else:
+                findings += [_two_forms(earlier, item, int(n)) for n in np.flatnonzero(again)]
+            item = replace(item, block=item.block.take(~again))
+        out.append(item)
+    return [item for item in out if len(item.block.series)], findings
+
+
+def _beside_in_time(block: Block, more: Block) -> Block:
+    """Return a block with the figures of another one where it has none; no period is in both."""
+    column = block.series.locate(more.series.key)
+    row, n = np.nonzero(status_of(more) != NO_FIGURE)
+    parts: dict[str, Any] = {}
+    for name, empty in (
+        ("value", np.nan),
+        ("status", NO_FIGURE),
+        ("conf", 0),
+        ("imputed", 0),
+        ("assumed", 0),
+    ):
+        old, new = getattr(block, name), getattr(more, name)
+        if new is None:
+            continue
+        full = np.full(block.value.shape, empty, new.dtype) if old is None else old.copy()
+        full[row, column[n]] = new[row, n]
+        parts[name] = full
+    return replace(block, **parts)
+
+
+def _two_forms(earlier: ObservedBlock, item: ObservedBlock, n: int) -> dict[str, Any]:
+    return note(
+        "series_in_two_forms",
+        "stop",
+        f"sources '{earlier.source}' and '{item.source}' deliver one series in different forms",
+        item.block.series.table,
+        int(item.block.series.key[n]),
+        measure=item.block.key.measure,
+        found=f"frequency {earlier.frequency}, unit multiplier {earlier.unit_mult}, and frequency "
+        f"{item.frequency}, unit multiplier {item.unit_mult}",
+        expected="one frequency and one unit multiplier for a series",
+        remedy="deliver the series once, or declare one of the two under another measure or dimension",
+    )
 
 
 def _forms(
@@ -269,10 +331,13 @@ def _not_chosen(block: Block, instead: Block) -> Block:
 
 
 def _set_aside(block: Block, delivered: Mapping[BlockKey, Block]) -> Block:
-    """Return a delivered stock with only those series chosen that no investment is delivered for.
+    """Return a delivered stock or share with only those series chosen that are not computed.
 
-    The others are benchmarks, or stand beside the stock that is computed.
+    A stock that investment is delivered for is a benchmark, or stands beside the one that is computed; a labour
+    share that incomes are delivered for is one method of the cascade.
     """
+    if block.key.measure == "labour_share":
+        return _share_set_aside(block, delivered)
     if block.key.measure not in STOCKS:
         return block
     chosen = block.chosen.copy()
@@ -281,6 +346,15 @@ def _set_aside(block: Block, delivered: Mapping[BlockKey, Block]) -> Block:
         if investment is not None:
             chosen &= investment.series.locate(block.series.key) < 0
     return replace(block, chosen=chosen)
+
+
+def _share_set_aside(block: Block, delivered: Mapping[BlockKey, Block]) -> Block:
+    value_added = delivered.get(BlockKey("value_added", "delivered", "current"))
+    compensation = delivered.get(BlockKey("compensation_of_employees", "delivered", "current"))
+    if value_added is None or compensation is None:
+        return block
+    paid = compensation.series.locate(block.series.projected(total_of("worker_group"))) >= 0
+    return replace(block, chosen=~(paid & (value_added.series.locate(block.series.key) >= 0)))
 
 
 def _with_parts(block: Block, params: HarmoniseParams) -> Block:

@@ -63,6 +63,14 @@ LABOUR_INCOME = {
     ),
 }
 
+FROM_SHARE = Formula(
+    name="labour_income_from_share",
+    equation="labour income = delivered labour share x Y",
+    citation="a published share stands in for its own account",
+    roles=(Role("labour_share"), Role("income_base")),
+    build=lambda s: Each(lambda share, base: share * base),
+)
+
 CAPITAL_INCOME = Formula(
     name="capital_income_as_rest",
     equation="capital income = Y - labour income",
@@ -87,7 +95,10 @@ CAPITAL_SHARE = Formula(
     build=lambda s: Each(capital_share),
 )
 
-FORMULAS = (FACTOR_COST, *LABOUR_INCOME.values(), CAPITAL_INCOME, LABOUR_SHARE, CAPITAL_SHARE)
+FORMULAS = (FACTOR_COST, *LABOUR_INCOME.values(), FROM_SHARE, CAPITAL_INCOME, LABOUR_SHARE, CAPITAL_SHARE)
+
+AS_DELIVERED = "as_delivered"
+"""Method of incomes and shares that follow a delivered labour share."""
 
 OVER_INDUSTRIES = "sum_of_industries"
 """Method of a total that adds up the chosen labour income of its industries, whatever their methods."""
@@ -111,28 +122,53 @@ def run(inputs: Inputs, params: IncomeParams) -> Result:
             for k, b in ((VALUE_ADDED, value_added), (COMPENSATION, compensation))
             if b is None
         ]
-        return Result([_from_delivered(delivered)] if delivered is not None else (), gap)
+        return Result(_from_delivered(delivered), gap)
     base, findings = _base(inputs, value_added, params)
     blocks: list[Block] = [base]
-    forms = _labour_incomes(inputs, params, base, compensation)
+    forms = dict(_labour_incomes(inputs, params, base, compensation))
+    if delivered is not None and not delivered.chosen.all():
+        forms["delivered"] = _as_delivered(delivered.take(~delivered.chosen), base, params)
     chosen = choose(base, forms, params.cascade.value)
     for name, block in forms.items():
         blocks.extend(_shares(replace(block, chosen=chosen[name]), base))
     blocks.extend(_over_industries(base, blocks))
+    blocks.extend(_from_delivered(delivered))
     findings.extend(_without_choice(base, chosen))
     findings.extend(_outside(blocks))
     return Result(blocks, findings)
 
 
-def _from_delivered(share_block: Block) -> Block:
-    return derive(
-        CAPITAL_SHARE,
-        BlockKey("capital_share", "delivered", "_Z"),
-        share_block.series,
-        share_block.periods,
-        {"labour_share": given(share_block)},
-        part=False,
+def _from_delivered(delivered: Block | None) -> list[Block]:
+    """Return capital shares from labour shares that were delivered in place of incomes."""
+    if delivered is None or not delivered.chosen.any():
+        return []
+    alone = delivered.take(delivered.chosen)
+    return [
+        derive(
+            CAPITAL_SHARE,
+            BlockKey("capital_share", "delivered", "_Z"),
+            alone.series,
+            alone.periods,
+            {"labour_share": given(alone)},
+            part=False,
+        )
+    ]
+
+
+def _as_delivered(share_block: Block, base: Block, params: IncomeParams) -> Block:
+    """Return labour income by a delivered share, for series that have incomes as well."""
+    mine = base.take(base.series.locate(share_block.series.key) >= 0)
+    block = derive(
+        FROM_SHARE,
+        BlockKey("labour_income", AS_DELIVERED, "current"),
+        mine.series,
+        mine.periods,
+        {"labour_share": given(share_block), "income_base": given(mine)},
+        sets=((params.cascade,),),
+        chosen=False,
+        part=mine.part,
     )
+    return block.take(block.held)
 
 
 def _base(inputs: Inputs, value_added: Block, params: IncomeParams) -> tuple[Block, list[dict[str, Any]]]:
@@ -334,7 +370,7 @@ STAGE = Stage(
                 ("labour_share", "_Z"),
                 ("capital_share", "_Z"),
             )
-            for method in (*LABOUR_INCOME, OVER_INDUSTRIES)
+            for method in (*LABOUR_INCOME, AS_DELIVERED, OVER_INDUSTRIES)
         ),
         "capital_share/delivered/_Z",
     ),

@@ -67,10 +67,11 @@ def test_an_efficiency_that_rises_with_age_is_told():
 
 
 def test_a_negative_efficiency_is_told():
-    """Lives of 3 lose a third of the price a year; at -30 % a year that is more than the first service is worth."""
-    rule = {"age_price": "straight_line", "life": 3.0, "discount_rate": -0.3, **AT_ONCE}
-    _, findings = _stocks(rule)
+    """Where the shortest lives are over, prices fall more slowly than money loses at -5 % a year."""
+    rule = {"age_price": "declining_balance", "declining_balance_rate": 1.0, "life": 30.0}
+    _, findings = _stocks({**rule, "discount_rate": -0.05, **NORMAL})
     assert rules_of(findings) == ["prices_against_discount_rate"]
+    assert findings[0]["found"].startswith("-")
 
 
 @pytest.mark.parametrize("pattern", [AT_ONCE, NORMAL])
