@@ -284,6 +284,7 @@ def capital(files: Files) -> dict[str, Any]:
         sums.add("investment/sum_of_parts/current", asset, flow)
         flow = flow / p
         files.put("investment/deflated/constant", flow, axes)
+        sums.add("investment/deflated/constant", asset, flow)
         growth, start = trend(flow)
         files.put("trend_growth/log_linear_trend/_Z", growth[None], axes, -1)
         files.put("trend_investment/log_linear_trend/constant", start[None], axes, -1)

@@ -77,7 +77,9 @@ FAULTS = {
     ),
     "empty csv": Fault(write(INCOME, b""), 5, (INCOME, "the file is empty", "assembly.toml, line ")),
     "header without a record": Fault(
-        write(HOURS, b"period,sector,branch,status,thousand hours\n"), 5, (HOURS, "no record follows the header")
+        write(HOURS, b"period,sector,branch,status,thousand hours\n"),
+        5,
+        (HOURS, "no record follows the header"),
     ),
     "empty workbook": Fault(write(BOOK, b""), 5, (BOOK, "the file is empty", "assembly.toml, line ")),
     "binary garbage for a workbook": Fault(
