@@ -20,6 +20,8 @@ from keelbook.stages.catalogue import FORMULAS
 
 Run = Callable[..., "subprocess.CompletedProcess[str]"]
 
+CORPORATIONS = ("--area", "XV", "--sector", "S11")
+
 
 def ask(*arguments: object) -> str:
     """Run a command that must succeed and return what it prints on standard output."""
@@ -66,59 +68,95 @@ def test_help_imports_none_of_the_heavy_libraries() -> None:
 
 
 def test_a_cell_with_a_superscript_is_traced_to_its_address_and_raw_text(demo_build: Path) -> None:
-    """X12 reads 1109.1 with a footnote 1 behind it, which common readers take for 1109.11."""
+    """Y12 reads 1032.9 with a footnote 1 behind it, which common readers take for 1032.91."""
     found = reply(
-        "trace", demo_build, "investment", "--industry", "C", "--asset", "N112", "--price-basis", "current",
-        "--year", "2006",
+        "trace", demo_build, "investment", *CORPORATIONS, "--industry", "C", "--asset", "N112", "--price-basis",
+        "current", "--year", "2006",
     )  # fmt: skip
-    assert found["stored"] == found["recomputed"] == 1109.1
+    assert found["stored"] == found["recomputed"] == 1032.9
     cell = cells(found)[0]
     assert (cell["file"], cell["sheet"]) == ("sources/capital_formation.xlsx", "T1 Investment")
-    assert (cell["address"], cell["row"], cell["column"]) == ("X12", 12, 24)
-    assert cell["raw"] == "1109.1^1"
+    assert (cell["address"], cell["row"], cell["column"]) == ("Y12", 12, 25)
+    assert cell["raw"] == "1032.9^1"
     assert len(cell["sha256"]) == 64
     text = ask(
-        "trace", demo_build, "investment", "--industry", "C", "--asset", "N112", "--price-basis", "current",
-        "--year", "2006",
+        "trace", demo_build, "investment", *CORPORATIONS, "--industry", "C", "--asset", "N112", "--price-basis",
+        "current", "--year", "2006",
     )  # fmt: skip
-    assert "sources/capital_formation.xlsx, sheet 'T1 Investment', X12: \"1109.1^1\"" in text
+    assert "sources/capital_formation.xlsx, sheet 'T1 Investment', Y12: \"1032.9^1\"" in text
 
 
 def test_a_figure_of_the_cp1252_file_is_traced_to_its_line(demo_build: Path) -> None:
     path = demo_build / "sources" / "income_account.csv"
     lines = path.read_text(encoding="cp1252").splitlines()
-    line = next(n for n, text in enumerate(lines, 1) if text.startswith("2015;Verarb") and ";B.1g;" in text)
-    raw = lines[line - 1].split(";")[3]
+    line = next(
+        n
+        for n, text in enumerate(lines, 1)
+        if text.startswith("2015;Kapital") and ";Verarb" in text and ";B.1g;" in text
+    )
+    raw = lines[line - 1].split(";")[4]
     found = reply(
-        "trace", demo_build, "value_added", "--industry", "C", "--price-basis", "current", "--year", 2015
+        "trace",
+        demo_build,
+        "value_added",
+        *CORPORATIONS,
+        "--industry",
+        "C",
+        "--price-basis",
+        "current",
+        "--year",
+        2015,
     )
     assert found["stored"] == float(raw.replace(".", "").replace(",", "."))
     (cell,) = cells(found)
     assert (cell["file"], cell["sheet"]) == ("sources/income_account.csv", "")
-    assert (cell["row"], cell["column"], cell["raw"]) == (line, 4, raw)
+    assert (cell["row"], cell["column"], cell["raw"]) == (line, 5, raw)
 
 
 def test_a_year_of_hours_is_traced_to_its_four_quarters(demo_build: Path) -> None:
     path = demo_build / "sources" / "hours_quarterly.csv"
     lines = path.read_text(encoding="utf-8-sig").splitlines()
-    wanted = [f"2019-Q{q},M,self-employed," for q in range(1, 5)]
+    wanted = [f"2019-Q{q},S14,M,self-employed," for q in range(1, 5)]
     at = [next(n for n, text in enumerate(lines, 1) if text.startswith(start)) for start in wanted]
     raw = [lines[n - 1].rsplit(",", 1)[1] for n in at]
     assert all(text.endswith("p") for text in raw)
     found = reply(
-        "trace", demo_build, "hours_worked", "--industry", "M", "--worker-group", "SELF", "--year", 2019
+        "trace",
+        demo_build,
+        "hours_worked",
+        "--area",
+        "XV",
+        "--sector",
+        "S14",
+        "--industry",
+        "M",
+        "--worker-group",
+        "SELF",
+        "--year",
+        2019,
     )
     # Thousand hours in four quarters are million hours of a year.
     assert found["stored"] == pytest.approx(sum(int(text[:-1]) for text in raw) / 1000, rel=1e-12)
     assert [term["time_period"] for term in found["terms"]] == [f"2019-Q{q}" for q in range(1, 5)]
     assert [(c["row"], c["column"], c["raw"], c["obs_status"]) for c in cells(found)] == [
-        (n, 4, text, "P") for n, text in zip(at, raw, strict=True)
+        (n, 5, text, "P") for n, text in zip(at, raw, strict=True)
     ]
 
 
 def test_a_stock_is_traced_through_every_level_to_cells(demo_build: Path) -> None:
     found = reply(
-        "trace", demo_build, "net_stock", "--industry", "J", "--asset", "N1132", "--year", 2015, "--depth", 6
+        "trace",
+        demo_build,
+        "net_stock",
+        *CORPORATIONS,
+        "--industry",
+        "J",
+        "--asset",
+        "N1132",
+        "--year",
+        2015,
+        "--depth",
+        6,
     )
     assert found["citation"]
     names = {p["name"]: p for p in found["parameters"]}
@@ -135,7 +173,7 @@ def test_a_stock_is_traced_through_every_level_to_cells(demo_build: Path) -> Non
 
 def test_trace_lists_the_choices_when_several_figures_fit(demo_build: Path) -> None:
     result = CliRunner().invoke(
-        main, ["trace", str(demo_build), "user_cost", "--industry", "C", "--year", "2015"]
+        main, ["trace", str(demo_build), "user_cost", *CORPORATIONS, "--industry", "J", "--year", "2015"]
     )
     assert result.exit_code == 2
     assert "6 series of user_cost fit" in result.stderr
@@ -150,7 +188,7 @@ def test_trace_names_the_nearest_measure(demo_build: Path) -> None:
 
 def test_decompose_prints_what_is_stored(demo_build: Path) -> None:
     text = ask("decompose", demo_build)
-    assert text.splitlines()[0].startswith("Vorrelund (an invented country)")
+    assert text.splitlines()[0].startswith("Vorrelund and Wendermark (invented countries)")
     for word in (
         "output",
         "capital",
@@ -163,7 +201,9 @@ def test_decompose_prints_what_is_stored(demo_build: Path) -> None:
     ):
         assert word in text
     rows = reply("decompose", demo_build)
-    assert [row["industry"] for row in rows["averages"]] == ["_T", *"ACDFGHJM"]
+    shown = [(row["area"], row["sector"], row["industry"]) for row in rows["averages"]]
+    assert shown[:14] == [("XV", "S1", code) for code in ("_T", *"ACDFGHJLMOPQ")] + [("XV", "S11", "_T")]
+    assert shown[-9:] == [("XW", "S1", code) for code in ("_T", *"ACDFGHJM")]
     whole = rows["averages"][0]
     assert (whole["first"], whole["last"]) == (1987, 2019)
     parts = whole["capital_contribution"] + whole["labour_contribution"] + whole["residual_growth"]
@@ -173,7 +213,17 @@ def test_decompose_prints_what_is_stored(demo_build: Path) -> None:
 
 def test_decompose_over_chosen_years_and_in_the_other_form(demo_build: Path) -> None:
     rows = reply(
-        "decompose", demo_build, "--industry", "J", "--form", "discrete", "--from", 2001, "--to", 2010
+        "decompose",
+        demo_build,
+        *CORPORATIONS,
+        "--industry",
+        "J",
+        "--form",
+        "discrete",
+        "--from",
+        2001,
+        "--to",
+        2010,
     )
     assert {(row["first"], row["last"]) for row in rows["averages"]} == {(2001, 2010)}
     mine = [row for row in rows["yearly"]["rows"] if 2001 <= int(row["time_period"]) <= 2010]
@@ -193,9 +243,11 @@ def test_screen_reads_and_writes_nothing(copy_fixture: Callable[[str, Path], Pat
     folder = copy_fixture("demo", tmp_path / "demo")
     before = sorted(folder.rglob("*"))
     result = reply("screen", folder)
-    assert sum(row["cells"] for row in result["sources"]) == 6475
-    assert result["findings"] == []
-    assert "no findings" in ask("screen", folder)
+    assert sum(row["cells"] for row in result["sources"]) == 19113
+    assert {row["rule"] for row in result["findings"]} == {
+        "coverage", "growth_jump", "hours_per_person", "series_break", "sign_income"
+    }  # fmt: skip
+    assert "[warn sign_income]" in ask("screen", folder)
     assert sorted(folder.rglob("*")) == before
 
 
@@ -249,7 +301,9 @@ def test_version(keelbook: Run) -> None:
 
 @pytest.mark.parametrize("place", ["build", "build/panel.duckdb", "."])
 def test_a_place_may_be_an_assembly_a_build_folder_or_a_file(place: str, demo_build: Path) -> None:
-    found = reply("trace", demo_build / place, "labour_share", "--industry", "_T", "--year", 2015)
+    found = reply(
+        "trace", demo_build / place, "labour_share", "--area", "XW", "--industry", "_T", "--year", 2015
+    )
     assert found["formula"] == "labour_share"
 
 

@@ -4,6 +4,7 @@ import csv
 import os
 import shutil
 import subprocess
+from collections.abc import Mapping
 from pathlib import Path
 from typing import Any
 
@@ -91,7 +92,7 @@ def test_the_cells_are_stored_as_counted(
     assert cited[0][0] == demo_report.counts["observations"].sum()
 
 
-def where(row: dict[str, Any]) -> tuple[str, ...]:
+def where(row: Mapping[Any, Any]) -> tuple[str, ...]:
     """Return rule, severity and place of a finding: its cell, or its series where a stage found it."""
     cell, series = ("file", "sheet", "row", "column"), (*DIMS, "measure", "time_period")
     return (row["rule"], row["severity"], *(str(row[name]) for name in (cell if row["file"] else series)))

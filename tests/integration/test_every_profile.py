@@ -239,8 +239,8 @@ def test_figures_are_reproduced_with_the_weights_that_the_record_gives(
     for measure in ("gross_stock", "productive_stock", "net_stock", *LOST):
         traced = trace(build, find(build, measure, _key(name)), FIRST + YEARS - 1)
         assert traced.reproduced
-        assert [i.role for i in traced.inputs] == ["investment"] * YEARS + ["opening_stock"]
-        opening = traced.inputs[-1]
+        assert [i.role for i in traced.inputs].count("investment") == YEARS
+        (opening,) = (i for i in traced.inputs if i.role == "opening_stock")
         assert opening.series is not None
         assert trace(build, opening.series, FIRST - 1).reproduced
 

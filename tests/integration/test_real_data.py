@@ -343,7 +343,7 @@ def test_a_firm_without_a_rate_has_no_stock_and_the_note_says_why(copy_fixture, 
             "select distinct industry, severity, message from finding where rule = 'no_rate_between_benchmarks'"
         )
         assert [row[:2] for row in rows] == [("F06", "note")]
-        assert rows[0][2].startswith("not computed: no rate in (0,1)")
+        assert rows[0][2].startswith("not computed, and missing from totals: no rate in (0,1)")
         with_stock = build.rows(
             "select distinct industry from series where measure = 'net_stock' and asset = 'N11' "
             "and method = 'perpetual_inventory' and industry <> '_T' order by 1"

@@ -71,7 +71,7 @@ class Column(Declared):
             for limit, name in _INTEGERS:
                 if -limit <= self.minimum and self.maximum < limit:
                     return name
-        return "REAL" if self.single else _SQL[self.type]
+        return "FLOAT" if self.single else _SQL[self.type]
 
 
 class _File(Declared):

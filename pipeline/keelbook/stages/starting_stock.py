@@ -403,9 +403,9 @@ def _no_rate_between(investment: Block, n: int, years: str, roots: int) -> dict[
     return note(
         "no_rate_between_benchmarks",
         "note",
-        f"not computed: no rate in (0,1) leads from the benchmark of {years}"
+        f"not computed, and missing from totals: no rate in (0,1) leads from the benchmark of {years}"
         if roots == 0
-        else f"not computed: {roots} rates in (0,1) lead from the benchmark of {years}",
+        else f"not computed, and missing from totals: {roots} rates in (0,1) lead from the benchmark of {years}",
         investment.series.table,
         int(investment.series.key[n]),
         measure="net_stock",

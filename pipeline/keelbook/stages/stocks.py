@@ -247,7 +247,7 @@ def _choices(
                     "measure": "net_stock",
                     "asset": codes["asset"][a],
                     "industry": codes["industry"][j],
-                    "message": "no row of rules/assets.csv covers this asset; its stocks are not computed",
+                    "message": "no row of rules/assets.csv covers this asset; its stocks are not computed, and missing from totals",
                     "expected": "a row for the asset, or for a group that it belongs to",
                     "remedy": "add a row to rules/assets.csv of the assembly",
                 }

@@ -32,7 +32,8 @@ create view panel as
 select s.area, s.sector, s.industry, s.asset, s.worker_group, cast(f.period as varchar) as time_period,
        s.measure, s.method, s.price_basis, f.value, s.unit, s.unit_mult,
        o.code as obs_status, c.code as conf_status, s.chosen,
-       1 - f.imputed_part - f.assumed_part as observed_part, f.imputed_part, f.assumed_part
+       1 - f.imputed_part::double - f.assumed_part::double as observed_part,
+       f.imputed_part::double as imputed_part, f.assumed_part::double as assumed_part
 from figure f
 join series s using (series_id)
 join code o on o.list = 'obs_status' and o.position = f.obs_status

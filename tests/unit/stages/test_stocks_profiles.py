@@ -71,7 +71,9 @@ def test_a_negative_efficiency_is_told():
     rule = {"age_price": "declining_balance", "declining_balance_rate": 1.0, "life": 30.0}
     _, findings = _stocks({**rule, "discount_rate": -0.05, **NORMAL})
     assert rules_of(findings) == ["prices_against_discount_rate"]
-    assert findings[0]["found"].startswith("-")
+    # It goes on falling for some years: only the sign is wrong here.
+    before, after = findings[0]["found"].split(", ")[0].split(" after ")[::-1]
+    assert float(after) < 0 < float(before)
 
 
 @pytest.mark.parametrize("pattern", [AT_ONCE, NORMAL])
