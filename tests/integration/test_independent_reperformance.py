@@ -1,10 +1,14 @@
-"""Two producers of the demo computed again from the files as received: csv, openpyxl, numpy and loops only.
+"""Four industries of the demo computed again from the files as received: csv, openpyxl, numpy and loops only.
+
+Two of the neighbour: plain tables, a steady-state start, labour by hours. Two of the corporations at home: merged
+sheets, a linked index, prices of a branch, a benchmark, given stocks of inventories and land, labour by skill.
 
 Nothing of Keelbook is imported here. The file may only be changed when methods change, never to follow the code.
 """
 
 import csv
 import math
+from collections.abc import Callable
 from dataclasses import dataclass, field
 from pathlib import Path
 from typing import Any
@@ -18,9 +22,15 @@ from openpyxl.cell.rich_text import CellRichText
 YEARS = list(range(1985, 2020))
 REFERENCE = 2015
 WINDOW = 10
+BENCHMARK = 2000
 BACKCAST = 2000
-"""Years assumed before the first: with the lowest growth plus depreciation of the two industries, 1e-16 is left."""
+"""Years assumed before the first: of the slowest asset, about 1e-16 of the stock is left out."""
 
+BRANCHES = {"C": "Manufacturing", "J": "Information and communication"}
+GERMAN = {
+    "C": "Verarbeitendes Gewerbe (Industrie) – Hütten und Fabriken",
+    "J": "Information, Fernmeldewesen und Büro-Datenverarbeitung",
+}
 ASSETS = {
     "N112": "Buildings and structures",
     "N1131": "Transport equipment",
@@ -29,156 +39,198 @@ ASSETS = {
     "N1171": "Research and development",
     "N1173": "Computer software and databases",
 }
-TRANSACTIONS = ("B.1g", "D.29-D.39", "D.1")
-SKILLS = ("low", "medium", "high")
+GIVEN = {"N12": "Inventories", "N211": "Land"}
 
 Series = dict[int, float]
 
 
-def figure(cell: Any) -> float:
-    """Read a figure from a cell: superscript runs are footnotes, a letter behind the digits is a flag."""
-    value = cell.value
-    if isinstance(value, CellRichText):
-        value = "".join(run for run in value if isinstance(run, str))
-    return float(value.rstrip("pe")) if isinstance(value, str) else float(value)
+# --- reading ------------------------------------------------------------------------------------------------
 
 
 def label(cell: Any) -> str:
+    """Read a label without what is set as superscript."""
     value = cell.value
     if isinstance(value, CellRichText):
         value = "".join(run for run in value if isinstance(run, str))
     return "" if value is None else str(value)
 
 
+def figure(cell: Any) -> float:
+    """Read a figure: superscript runs are footnotes, a letter behind the digits is a flag, "-" is no figure."""
+    text = label(cell).rstrip("pe")
+    return math.nan if text == "-" else float(text)
+
+
+def row_of(sheet: Any, first: int, labels: tuple[str, ...]) -> Series | None:
+    """Find the row with these labels (a merged label counts for every row below it) and read it across YEARS."""
+    current = [""] * len(labels)
+    for row in range(first, sheet.max_row + 1):
+        said = [label(sheet.cell(row, at + 1)) for at in range(len(labels))]
+        if not any(said):
+            return None
+        current = [new or old for new, old in zip(said, current, strict=True)]
+        if tuple(current) == labels:
+            return {year: figure(sheet.cell(row, len(labels) + 1 + t)) for t, year in enumerate(YEARS)}
+    return None
+
+
+def column_of(sheet: Any, header: int, first: int, name: str, group: str = "") -> Series:
+    """Read the column under a header (and under a group header in the row above) down the years."""
+    current, found = "", 0
+    for at in range(2, sheet.max_column + 1):
+        current = label(sheet.cell(header - 1, at)) or current
+        if label(sheet.cell(header, at)) == name and (not group or current == group):
+            found = at
+    if not found:
+        return {}
+    out = {}
+    for row in range(first, sheet.max_row + 1):
+        year = label(sheet.cell(row, 1))
+        if not year.isdigit():
+            break
+        out[int(year)] = figure(sheet.cell(row, found))
+    return out
+
+
+def records(path: Path, encoding: str, delimiter: str) -> list[dict[str, str]]:
+    with path.open(encoding=encoding, newline="") as lines:
+        return list(csv.DictReader(lines, delimiter=delimiter))
+
+
 @dataclass
 class Received:
-    """What the files give of one producer: million of currency, thousand hours, prices with the reference year = 1."""
+    """What the files say of one industry, years complete, prices with the reference year = 1."""
 
+    area: str
+    sector: str
+    industry: str
     investment: dict[str, Series]
     price: dict[str, Series]
+    given: dict[str, Series]
+    benchmark: dict[str, float]
     volume: Series
-    income: dict[str, Series]
-    employees: Series
-    self_employed: Series
-    benchmark: dict[str, tuple[int, float]]
-    skill_hours: list[Series]
-    skill_pay: list[Series]
+    value_added: Series
+    taxes: Series
+    pay: Series
+    labour_income: Callable[[int], float]
+    method: str
+    labour: dict[str, Series]
+    labour_pay: dict[str, Series]
 
 
 def rebased(raw: Series) -> Series:
-    assert list(raw) == YEARS
+    assert sorted(raw) == YEARS
     return {year: value / raw[REFERENCE] for year, value in raw.items()}
 
 
-def across(sheet: Any, header: int, *labels: str) -> Series:
-    """Read the row with these labels; a merged label holds until the next one."""
-    current = [""] * len(labels)
-    for row in range(header + 1, sheet.max_row + 1):
-        current = [label(sheet.cell(row, at)) or text for at, text in enumerate(current, start=1)]
-        if tuple(current) == labels:
-            return {year: figure(sheet.cell(row, len(labels) + 1 + t)) for t, year in enumerate(YEARS)}
-    raise LookupError(labels)
-
-
-def down(sheet: Any, header: int, column: int) -> Series:
-    """Read a column of figures with the years in column 1; a dash is no figure."""
-    rows = range(header + 1, sheet.max_row + 1)
-    return {
-        int(label(sheet.cell(row, 1))): figure(sheet.cell(row, column))
-        for row in rows
-        if label(sheet.cell(row, column)) != "-"
-    }
-
-
-def price_of_corporations(book: Any, branch: str, asset: str) -> Series:
-    """The price of the asset in the branch where there is one, else of the asset, with an earlier base linked on."""
-    own, current = book["T3 Prices by branch"], ""
-    for at in range(2, own.max_column + 1):
-        current = label(own.cell(5, at)) or current
-        if (current, label(own.cell(6, at))) == (branch, asset):
-            return rebased(down(own, 6, at))
-    sheet, old = book["T2 Prices"], book["T2b Old base"]
-    raw = down(sheet, 5, next(at for at in range(2, 11) if label(sheet.cell(5, at)) == asset))
-    if label(old.cell(5, 2)) == asset:
-        earlier = down(old, 5, 2)
-        link = min(raw)
-        before = {year: value * raw[link] / earlier[link] for year, value in earlier.items() if year < link}
-        raw = before | raw
+def home_price(book: Any, branch: str, asset: str) -> Series:
+    """The price of the asset in the branch where there is one, else of the asset, linked to its old base."""
+    raw = column_of(book["T3 Prices by branch"], 6, 7, asset, branch)
+    if not raw:
+        raw = column_of(book["T2 Prices"], 5, 6, asset)
+    first = min(year for year, value in raw.items() if not math.isnan(value))
+    if first > YEARS[0]:
+        old = column_of(book["T2b Old base"], 5, 6, asset)
+        raw |= {year: old[year] * raw[first] / old[first] for year in range(YEARS[0], first)}
     return rebased(raw)
 
 
-def by_skill(path: Path, industry: str) -> list[Series]:
-    with path.open(encoding="utf-8", newline="") as lines:
-        rows = {
-            r["Skill"]: {year: float(r[str(year)]) for year in YEARS}
-            for r in csv.DictReader(lines)
-            if (r["Sector"], r["Branch"]) == ("S11", industry)
-        }
-    return [rows[skill] for skill in SKILLS]
-
-
-def corporations(sources: Path, industry: str, branch: str, german: str) -> Received:
-    """Read an industry of the corporations of XV."""
+def corporations(sources: Path, industry: str) -> Received:
     book = openpyxl.load_workbook(sources / "capital_formation.xlsx", rich_text=True)
-    with (sources / "income_account.csv").open(encoding="cp1252", newline="") as lines:
-        rows = [r for r in csv.DictReader(lines, delimiter=";") if r["Sektor"] == "Kapitalgesellschaften"]
-    income = {
-        code: {
+    branch, own = BRANCHES[industry], ("S11", industry)
+    accounts = records(sources / "income_account.csv", "cp1252", ";")
+
+    def of(code: str) -> Series:
+        return {
             int(r["Jahr"]): float(r["Wert"].replace(".", "").replace(",", "."))
-            for r in rows
-            if (r["Branche"], r["Transaktion"]) == (german, code)
+            for r in accounts
+            if (r["Sektor"], r["Branche"], r["Transaktion"])
+            == ("Kapitalgesellschaften", GERMAN[industry], code)
         }
-        for code in TRANSACTIONS
-    }
-    worked = dict.fromkeys(YEARS, 0.0)
-    with (sources / "hours_quarterly.csv").open(encoding="utf-8-sig", newline="") as lines:
-        for r in csv.DictReader(lines):
-            if (r["sector"], r["branch"]) == ("S11", industry):
-                assert r["status"] == "employees"
-                worked[int(r["period"][:4])] += float(r["thousand hours"].rstrip("p"))
-    with (sources / "benchmark_stocks.csv").open(encoding="utf-8", newline="") as lines:
-        benchmark = {
-            r["asset"]: (int(r["year"]), float(r["net stock"]))
-            for r in csv.DictReader(lines)
-            if (r["sector"], r["branch"]) == ("S11", industry)
-        }
+
+    def by_skill(name: str) -> dict[str, Series]:
+        rows = records(sources / name, "utf-8", ",")
+        mine = [r for r in rows if (r["Sector"], r["Branch"]) == own]
+        return {r["Skill"]: {year: float(r[str(year)]) for year in YEARS} for r in mine}
+
+    surveys = records(sources / "benchmark_stocks.csv", "utf-8", ",")
+    pay, mixed = of("D.1"), of("B.3g")
+    given = {}
+    for asset, name in GIVEN.items():
+        found = row_of(book["T5 Land and inventories"], 6, (name, "Corporations", branch))
+        if found is not None:
+            given[asset] = found
+    investment = {}
+    for asset, name in ASSETS.items():
+        found = row_of(book["T1 Investment"], 6, ("Corporations", branch, name))
+        assert found is not None
+        investment[asset] = found
+    volume = row_of(book["T4 Volume"], 6, ("Corporations", branch))
+    assert volume is not None
     return Received(
-        {a: across(book["T1 Investment"], 5, "Corporations", branch, name) for a, name in ASSETS.items()},
-        {a: price_of_corporations(book, branch, name) for a, name in ASSETS.items()},
-        across(book["T4 Volume"], 5, "Corporations", branch),
-        income,
-        worked,
-        dict.fromkeys(YEARS, 0.0),
-        benchmark,
-        by_skill(sources / "hours_by_skill.csv", industry),
-        by_skill(sources / "compensation_by_skill.csv", industry),
+        "XV",
+        *own,
+        investment=investment,
+        price={
+            a: home_price(book, branch, n) for a, n in (ASSETS | GIVEN).items() if a in investment | given
+        },
+        given=given,
+        benchmark={
+            r["asset"]: float(r["net stock"])
+            for r in surveys
+            if (int(r["year"]), r["sector"], r["branch"]) == (BENCHMARK, *own)
+        },
+        volume=volume,
+        value_added=of("B.1g"),
+        taxes=of("D.29-D.39"),
+        pay=pay,
+        labour_income=lambda y: pay[y] + mixed[y] * 2 / 3,
+        method="fixed_fraction",
+        labour=by_skill("hours_by_skill.csv"),
+        labour_pay=by_skill("compensation_by_skill.csv"),
     )
 
 
 def neighbour(sources: Path, industry: str) -> Received:
-    """Read an industry of XW: investment in thousand million, hours in million, no workers by skill."""
-    book = openpyxl.load_workbook(sources / "neighbour.xlsx", rich_text=True)
-    prices = book["Prices"]
-    codes = {label(prices.cell(4, at)): at for at in range(2, 2 + len(ASSETS))}
-    income: dict[str, Series] = {code: {} for code in TRANSACTIONS}
-    for code, transaction, year, value, _ in book["Accounts"].iter_rows(min_row=5, values_only=True):
-        if code == industry and transaction in income:
-            income[transaction][year] = value
-
-    def thousand(status: str) -> Series:
-        return {y: 1000 * x for y, x in across(book["Hours"], 4, industry, status).items()}
-
+    book = openpyxl.load_workbook(sources / "neighbour.xlsx")
+    accounts: dict[str, Series] = {}
+    for row in book["Accounts"].iter_rows(min_row=5, values_only=True):
+        if row[0] == industry:
+            accounts.setdefault(str(row[1]), {})[int(row[2])] = float(row[3])
+    worked = {}
+    for status in ("employees", "self-employed"):
+        found = row_of(book["Hours"], 5, (industry, status))
+        assert found is not None
+        worked[status] = found
+    investment = {}
+    for asset in ASSETS:
+        found = row_of(book["Investment"], 5, (industry, asset))
+        assert found is not None
+        # Delivered in thousand million, kept in million.
+        investment[asset] = {year: 1000 * value for year, value in found.items()}
+    volume = row_of(book["Volume"], 5, (industry,))
+    assert volume is not None
+    pay = accounts["D.1"]
     return Received(
-        {a: {y: 1000 * x for y, x in across(book["Investment"], 4, industry, a).items()} for a in ASSETS},
-        {a: rebased(down(prices, 4, codes[a])) for a in ASSETS},
-        across(book["Volume"], 4, industry),
-        income,
-        thousand("employees"),
-        thousand("self-employed"),
-        {},
-        [],
-        [],
+        "XW",
+        "S1",
+        industry,
+        investment=investment,
+        price={asset: rebased(column_of(book["Prices"], 4, 5, asset)) for asset in ASSETS},
+        given={},
+        benchmark={},
+        volume=volume,
+        value_added=accounts["B.1g"],
+        taxes=accounts["D.29-D.39"],
+        pay=pay,
+        labour_income=lambda y: pay[y] + pay[y] / worked["employees"][y] * worked["self-employed"][y],
+        method="hours",
+        labour={"all": {y: sum(worked[status][y] for status in worked) for y in YEARS}},
+        labour_pay={"all": pay},
     )
+
+
+# --- capital ------------------------------------------------------------------------------------------------
 
 
 def asset_rule(path: Path, asset: str, industry: str) -> dict[str, float | None]:
@@ -248,163 +300,166 @@ class Account:
         return series
 
 
-def capital(account: Account, received: Received, rules: Path, industry: str, asset: str) -> None:
-    current, index = received.investment[asset], received.price[asset]
+def year_end_prices(index: Series) -> Series:
+    out = {y: math.sqrt(index[y] * index[y + 1]) for y in YEARS[:-1]}
+    out[YEARS[-1]] = index[YEARS[-1]] * math.sqrt(index[YEARS[-1]] / index[YEARS[-2]])
+    return out
+
+
+def produced(account: Account, files: Received, rules: Path, asset: str) -> None:
+    """Vintages of one asset, its stocks, what it loses, at all prices."""
+    current, index = files.investment[asset], files.price[asset]
     volume = account.put(
         "investment", "deflated", "constant", asset, {y: current[y] / index[y] for y in YEARS}
     )
     t = np.arange(1, WINDOW + 1)
     slope, level = np.polyfit(t, np.log([volume[y] for y in YEARS[:WINDOW]]), 1)
     g, first = math.exp(slope) - 1, math.exp(level + slope)
-    account.put("trend_growth", "log_linear_trend", "_Z", asset, {YEARS[0] - 1: g})
-    account.put("trend_investment", "log_linear_trend", "constant", asset, {YEARS[0] - 1: first})
+    before = YEARS[0] - 1
+    account.put("trend_growth", "log_linear_trend", "_Z", asset, {before: g})
+    account.put("trend_investment", "log_linear_trend", "constant", asset, {before: first})
     assumed = [first / (1 + g) ** j for j in range(BACKCAST, 0, -1)]
-    since = [volume[y] for y in YEARS]
-    vintages = [*assumed, *since]
-    productive, net, gross = weights(asset_rule(rules / "assets.csv", asset, industry), len(vintages))
+    observed = [volume[y] for y in YEARS]
+    count = len(assumed) + len(observed)
+    productive, net, gross = weights(asset_rule(rules / "assets.csv", asset, files.industry), count)
     stocks = {"productive_stock": productive, "net_stock": net} | (
         {} if gross is None else {"gross_stock": gross}
     )
-    if asset in received.benchmark:
-        year, known = received.benchmark[asset]
-        all_of_it = stock(vintages, net)[year]
-        of_investment = stock([0.0] * BACKCAST + since, net)[year]
-        factor = (known - of_investment) / (all_of_it - of_investment)
-        account.put("benchmark_factor", "benchmark", "_Z", asset, {YEARS[0] - 1: factor})
-        vintages = [*(factor * x for x in assumed), *since]
-    year_end = {}
-    for y in YEARS:
-        before, after = index.get(y - 1), index.get(y + 1)
-        if after is not None:
-            year_end[y] = math.sqrt(index[y] * after)
-        else:
-            assert before is not None
-            year_end[y] = index[y] * math.sqrt(index[y] / before)
     for measure, left in stocks.items():
-        found = stock(vintages, left)
-        start = "benchmark" if asset in received.benchmark else "steady_state"
-        account.put(measure, start, "constant", asset, {YEARS[0] - 1: found.pop(YEARS[0] - 1)})
-        account.put(measure, "perpetual_inventory", "constant", asset, found)
-        account.put(
-            measure, "perpetual_inventory", "year_end", asset, {y: year_end[y] * found[y] for y in YEARS}
-        )
+        found = stock([*assumed, *observed], left)[before]
+        account.put(measure, "steady_state", "constant", asset, {before: found})
+    factor = 1.0
+    if asset in files.benchmark:
+        nothing = [0.0] * len(assumed)
+        of_observed = stock([*nothing, *observed], net)[BENCHMARK]
+        of_assumed = stock([*assumed, *[0.0] * len(observed)], net)[BENCHMARK]
+        factor = (files.benchmark[asset] - of_observed) / of_assumed
+        account.put("benchmark_factor", "benchmark", "_Z", asset, {before: factor})
+    vintages = [*(factor * one for one in assumed), *observed]
+    year_end = year_end_prices(index)
+    for measure, left in stocks.items():
+        found_all = stock(vintages, left)
+        opening = found_all.pop(before)
+        if asset in files.benchmark:
+            account.put(measure, "benchmark", "constant", asset, {before: opening})
+        account.put(measure, "perpetual_inventory", "constant", asset, found_all)
+        valued = {y: year_end[y] * found_all[y] for y in YEARS}
+        account.put(measure, "perpetual_inventory", "year_end", asset, valued)
     losses = {"consumption_of_fixed_capital": net} | ({} if gross is None else {"retirements": gross})
     for measure, left in losses.items():
         lost = account.put(measure, "perpetual_inventory", "constant", asset, loss(vintages, left))
         account.put(measure, "perpetual_inventory", "current", asset, {y: index[y] * lost[y] for y in YEARS})
-    w = account.figures["net_stock", "perpetual_inventory", "constant", asset]
-    k = account.figures["productive_stock", "perpetual_inventory", "constant", asset]
+
+
+def in_services(account: Account, files: Received, asset: str) -> tuple[Series, Series, Series, Series]:
+    """Base, consumption, revaluation and average stock of an asset; a given stock does not wear out."""
+    index = files.price[asset]
+    if asset in files.given:
+        w = k = account.put("productive_stock", "as_net_stock", "constant", asset, files.given[asset])
+        worn = dict.fromkeys(YEARS, 0.0)
+    else:
+        w, k = (
+            account.figures[measure, "perpetual_inventory", "constant", asset]
+            for measure in ("net_stock", "productive_stock")
+        )
+        worn = account.figures["consumption_of_fixed_capital", "perpetual_inventory", "current", asset]
     base = {y: index[y] * (w[y - 1] + w[y]) / 2 for y in YEARS[1:]}
-    account.put("asset_base", "average", "current", asset, base)
+    year_end = year_end_prices(index)
     gain = {y: (year_end[y] / year_end[y - 1] - 1) * base[y] for y in YEARS[1:]}
+    mean = {y: (k[y - 1] + k[y]) / 2 for y in YEARS[1:]}
+    account.put("asset_base", "average", "current", asset, base)
     account.put("revaluation", "actual", "current", asset, gain)
-    account.put(
-        "productive_stock_average",
-        "average",
-        "constant",
-        asset,
-        {y: (k[y - 1] + k[y]) / 2 for y in YEARS[1:]},
-    )
+    account.put("productive_stock_average", "average", "constant", asset, mean)
+    return base, worn, gain, mean
 
 
-def labour_input(received: Received, worked: Series) -> Series:
-    """Hours, or where there are groups of workers the Törnqvist index of their hours; only its growth is used."""
-    if not received.skill_hours:
-        return worked
-    out = {YEARS[0]: 1.0}
-    for y in YEARS[1:]:
-        now, then = (sum(pay[x] for pay in received.skill_pay) for x in (y, y - 1))
-        growth = 0.0
-        for spent, pay in zip(received.skill_hours, received.skill_pay, strict=True):
-            growth += (pay[y] / now + pay[y - 1] / then) / 2 * math.log(spent[y] / spent[y - 1])
-        out[y] = out[y - 1] * math.exp(growth)
+def tornqvist(quantities: dict[str, Series], values: dict[str, Series], years: list[int]) -> Series:
+    """Log growth of a bundle, weighted by the mean of this and last year's parts in the value."""
+    out = {}
+    for y in years:
+        total, total_before = (sum(one[x] for one in values.values()) for x in (y, y - 1))
+        out[y] = 0.0
+        for name, quantity in quantities.items():
+            weight = (values[name][y] / total + values[name][y - 1] / total_before) / 2
+            out[y] += weight * math.log(quantity[y] / quantity[y - 1])
     return out
 
 
-def industry_account(received: Received, rules: Path, industry: str, method: str) -> Account:
-    """Compute everything; `method` is the labour share that the demo chooses for the producer."""
-    account = Account()
-    for asset in ASSETS:
-        capital(account, received, rules, industry, asset)
-    output, taxes, pay = (received.income[code] for code in TRANSACTIONS)
-    worked, worked_self = received.employees, received.self_employed
-    base = account.put(
-        "value_added", "factor_cost", "current", "_Z", {y: output[y] - taxes[y] for y in YEARS}
-    )
-    labour = {y: pay[y] + pay[y] / worked[y] * worked_self[y] for y in YEARS}
-    share = account.put("labour_share", method, "_Z", "_Z", {y: labour[y] / base[y] for y in YEARS})
-    surplus = account.put("capital_income", method, "current", "_Z", {y: base[y] - labour[y] for y in YEARS})
-
-    def of(measure: str, method: str, basis: str, asset: str) -> Series:
-        return account.figures[measure, method, basis, asset]
-
-    rate: Series = {}
-    cost: dict[str, Series] = {asset: {} for asset in ASSETS}
-    for y in YEARS[1:]:
-        b = {a: of("asset_base", "average", "current", a)[y] for a in ASSETS}
-        d = {a: of("consumption_of_fixed_capital", "perpetual_inventory", "current", a)[y] for a in ASSETS}
-        h = {a: of("revaluation", "actual", "current", a)[y] for a in ASSETS}
-        rate[y] = (surplus[y] - sum(d.values()) + sum(h.values())) / sum(b.values())
-        for a in ASSETS:
-            cost[a][y] = rate[y] * b[a] + d[a] - h[a]
-    account.put("rate_of_return", "endogenous", "_Z", "_T", rate)
-    growth: Series = {}
-    for y in YEARS[2:]:
-        total, total_before = (sum(cost[a][x] for a in ASSETS) for x in (y, y - 1))
-        growth[y] = 0.0
-        for a in ASSETS:
-            k = of("productive_stock_average", "average", "constant", a)
-            weight = (cost[a][y] / total + cost[a][y - 1] / total_before) / 2
-            growth[y] += weight * math.log(k[y] / k[y - 1])
-    for a in ASSETS:
-        k = of("productive_stock_average", "average", "constant", a)
-        account.put("capital_compensation", "endogenous", "current", a, cost[a])
-        account.put("user_cost", "endogenous", "current", a, {y: cost[a][y] / k[y] for y in YEARS[1:]})
-    account.put("capital_services_growth", "tornqvist", "_Z", "_T", growth)
-    services: Series = {REFERENCE: 1.0}
+def chained(growth: Series) -> Series:
+    out: Series = {REFERENCE: 1.0}
     for y in range(REFERENCE + 1, YEARS[-1] + 1):
-        services[y] = services[y - 1] * math.exp(growth[y])
-    for y in range(REFERENCE - 1, YEARS[0], -1):
-        services[y] = services[y + 1] / math.exp(growth[y + 1])
-    account.put("capital_services", "tornqvist", "index", "_T", services)
-    volume = account.put("value_added", "delivered", "constant", "_Z", received.volume)
-    labour_of = labour_input(received, {y: worked[y] + worked_self[y] for y in YEARS})
+        out[y] = out[y - 1] * math.exp(growth[y])
+    for y in range(REFERENCE - 1, min(growth) - 2, -1):
+        out[y] = out[y + 1] / math.exp(growth[y + 1])
+    return out
+
+
+def account_of(files: Received, rules: Path) -> Account:
+    account = Account()
+    for asset in files.investment:
+        produced(account, files, rules, asset)
+    base = {y: files.value_added[y] - files.taxes[y] for y in YEARS}
+    labour = {y: files.labour_income(y) for y in YEARS}
+    share = {y: labour[y] / base[y] for y in YEARS}
+    surplus = {y: base[y] - labour[y] for y in YEARS}
+    account.put("value_added", "factor_cost", "current", "_Z", base)
+    account.put("labour_share", files.method, "_Z", "_Z", share)
+    account.put("capital_income", files.method, "current", "_Z", surplus)
+    used = {asset: in_services(account, files, asset) for asset in (*files.investment, *files.given)}
+    rate = {
+        y: (
+            surplus[y] - sum(d[y] for _, d, _, _ in used.values()) + sum(h[y] for _, _, h, _ in used.values())
+        )
+        / sum(b[y] for b, _, _, _ in used.values())
+        for y in YEARS[1:]
+    }
+    account.put("rate_of_return", "endogenous", "_Z", "_T", rate)
+    cost = {a: {y: rate[y] * b[y] + d[y] - h[y] for y in YEARS[1:]} for a, (b, d, h, _) in used.items()}
+    stocks = {a: mean for a, (_, _, _, mean) in used.items()}
+    for a in used:
+        account.put("capital_compensation", "endogenous", "current", a, cost[a])
+        account.put(
+            "user_cost", "endogenous", "current", a, {y: cost[a][y] / stocks[a][y] for y in YEARS[1:]}
+        )
+    growth = account.put(
+        "capital_services_growth", "tornqvist", "_Z", "_T", tornqvist(stocks, cost, YEARS[2:])
+    )
+    account.put("capital_services", "tornqvist", "index", "_T", chained(growth))
+    labour_growth = tornqvist(files.labour, files.labour_pay, YEARS[1:])
+    if len(files.labour) > 1:
+        account.put("labour_input_growth", "tornqvist", "_Z", "_Z", labour_growth)
+    account.put("value_added", "delivered", "constant", "_Z", files.volume)
     residual: Series = {}
     level: Series = {YEARS[1]: 1.0}
     for y in YEARS[2:]:
         mean = 1 - (share[y - 1] + share[y]) / 2
-        residual[y] = (
-            math.log(volume[y] / volume[y - 1])
-            - mean * math.log(services[y] / services[y - 1])
-            - (1 - mean) * math.log(labour_of[y] / labour_of[y - 1])
-        )
+        output = math.log(files.volume[y] / files.volume[y - 1])
+        residual[y] = output - mean * growth[y] - (1 - mean) * labour_growth[y]
         level[y] = level[y - 1] * math.exp(residual[y])
     account.put("residual_growth", "log", "_Z", "_Z", residual)
     account.put("residual_level", "log", "_Z", "_Z", level)
     return account
 
 
-@pytest.mark.parametrize("producer", [("XV", "S11", "J"), ("XW", "S1", "M")])
+@pytest.mark.parametrize("read", [corporations, neighbour])
+@pytest.mark.parametrize("industry", BRANCHES)
 def test_the_panel_holds_what_the_files_give(
-    producer: tuple[str, str, str], root: Path, demo_build: Path, panel: duckdb.DuckDBPyConnection
+    read: Callable[[Path, str], Received],
+    industry: str,
+    root: Path,
+    demo_build: Path,
+    panel: duckdb.DuckDBPyConnection,
 ) -> None:
-    """Corporations have no self-employed and no mixed income: the fixed fraction of it is then pay alone."""
-    area, _, industry = producer
-    sources = demo_build / "sources"
-    if area == "XV":
-        german = "Information, Fernmeldewesen und Büro-Datenverarbeitung"
-        received = corporations(sources, industry, "Information and communication", german)
-    else:
-        received = neighbour(sources, industry)
-    method = "hours" if area == "XW" else "fixed_fraction"
-    account = industry_account(received, root / "rules", industry, method)
+    files = read(demo_build / "sources", industry)
+    account = account_of(files, root / "rules")
     compared = 0
     for (measure, method, basis, asset), expected in account.figures.items():
+        # Labour input is a measure of workers: its asset is `_Z`, its worker group the total.
         stored = dict(
             panel.execute(
-                "select cast(time_period as integer), value from panel where area = ? and sector = ? and industry = ? "
-                "and measure = ? and method = ? and price_basis = ? and asset = ? order by 1",
-                [*producer, measure, method, basis, asset],
+                "select cast(time_period as integer), value from panel where area = ? and sector = ? "
+                "and industry = ? and measure = ? and method = ? and price_basis = ? and asset = ? order by 1",
+                [files.area, files.sector, industry, measure, method, basis, asset],
             ).fetchall()
         )
         assert sorted(stored) == sorted(expected), (measure, method, basis, asset)
@@ -412,15 +467,8 @@ def test_the_panel_holds_what_the_files_give(
         for year, value in expected.items():
             # Growth and residuals are differences of near numbers: they are held to the size of the series.
             within = 1e-9 * max(abs(value), size if measure.endswith("growth") else 0.0)
-            assert abs(stored[year] - value) <= within, (
-                measure,
-                method,
-                basis,
-                asset,
-                year,
-                stored[year],
-                value,
-            )
+            at = (measure, method, basis, asset, year, stored[year], value)
+            assert abs(stored[year] - value) <= within, at
         compared += len(expected)
     assert compared > 3000
 

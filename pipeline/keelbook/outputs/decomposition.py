@@ -71,11 +71,11 @@ def yearly(build: Build, key: Mapping[str, str], form: str | None = None) -> lis
 
 def averages_text(rows: Sequence[Mapping[str, Any]], names: Mapping[str, str]) -> list[str]:
     """Return the averages as an aligned table."""
-    areas = {row["area"] for row in rows}
+    several = [dim for dim in ("area", "sector") if len({row[dim] for row in rows}) > 1]
     out = []
     for row in rows:
         label = names.get(row["industry"], row["industry"])
-        code = f"{row['area']} {row['industry']}" if len(areas) > 1 else row["industry"]
+        code = " ".join([*(row[dim] for dim in several), row["industry"]])
         cells = [percent(row[name]) for name in RATES]
         out.append(
             [

@@ -5,12 +5,15 @@ from typing import Any
 
 import pandas as pd
 
+from keelbook.assembly.declaration import Assembly
 from keelbook.assembly.run import Report, as_problem
 from keelbook.audit.reading import Build
 from keelbook.outputs.decomposition import averages
 from keelbook.outputs.text import percent, plural, shown
 
 SHOWN_FINDINGS = 3
+WIDTH = 120
+"""Characters shown of a finding; `keelbook screen` and the table `finding` have it in full."""
 WORDS = {
     "harmonise": "delivered figures in one unit, frequency and reference year",
     "deflation": "investment volumes and year-end prices",
@@ -29,7 +32,7 @@ def summary(report: Report, place: Path) -> list[str]:
     lines = [
         shown(assembly.title),
         f"{_areas(assembly.lists.codes('area'))}, {assembly.period[0]}-{assembly.period[1]}, reference year "
-        f"{assembly.reference_year}, million {assembly.currency}",
+        f"{assembly.reference_year}, million {' and '.join(_currencies(assembly))}",
         "",
     ]
     if report.unchanged:
@@ -62,6 +65,11 @@ def _figures(stages: pd.DataFrame, name: str) -> int:
     return int(stages.loc[stages["stage"] == name, "figures"].sum())
 
 
+def _currencies(assembly: Assembly) -> list[str]:
+    """Return the currencies of the assembly and of its sources."""
+    return list(dict.fromkeys([assembly.currency, *(s.currency for s in assembly.sources if s.currency)]))
+
+
 def _areas(codes: tuple[str, ...], most: int = 8) -> str:
     listed = ", ".join(codes[:most])
     return listed if len(codes) <= most else f"{listed} and {len(codes) - most} more areas"
@@ -87,7 +95,7 @@ def _findings(found: pd.DataFrame) -> list[str]:
         problem: Any = as_problem(row)
         where = ", ".join(part for part in (problem.file, problem.place) if part)
         text = shown(f"{where + ': ' if where else ''}{problem.what}")
-        lines.append(f"           {text}")
+        lines.append(f"           {text if len(text) <= WIDTH else text[: WIDTH - 3] + '...'}")
     if len(found) > SHOWN_FINDINGS:
         lines.append(f"           and {len(found) - SHOWN_FINDINGS:,} more, in the table finding")
     return lines

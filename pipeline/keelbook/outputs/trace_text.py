@@ -52,7 +52,9 @@ def _figure(build: Build, traced: Traced, depth: int, every_term: bool, indent: 
 def _term(item: Input) -> str:
     name = item.series.label if item.series is not None else "observation"
     if item.weight == 0 and item.contribution == 0 and item.value != 0:
-        return f"{item.role}: {name} {item.period}: {number(item.value, 8)}, read for the weights of the others"
+        return (
+            f"{item.role}: {name} {item.period}: {number(item.value, 8)}, read for the weights of the others"
+        )
     return (
         f"{item.role}: {name} {item.period}: value {number(item.value, 8)} x weight {number(item.weight)} "
         f"= {number(item.contribution, 8)}"

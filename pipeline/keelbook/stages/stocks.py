@@ -24,7 +24,7 @@ from keelbook.stages.starting_stock import (
     solved_rates,
     start,
 )
-from keelbook.stages.totals import totals
+from keelbook.stages.totals import TOTALS, totals
 
 
 def _cohort_formula(measure: str, symbol: str) -> Formula:
@@ -170,10 +170,32 @@ def _totals(inputs: Inputs, blocks: Sequence[Block]) -> list[Block]:
                 forms += [] if delivered is None else [delivered]
             forms = [b for b in forms if b.chosen.any()]
             if len(forms) == 1 and forms[0].chosen.all():
-                out.extend(totals(forms[0], DIMENSIONS))
+                made = totals(forms[0], DIMENSIONS)
             elif forms:
                 whole = Book(forms).get(BlockKey(measure, CHOSEN, basis))
-                out.extend(totals(whole, DIMENSIONS, OF_ALL) if whole is not None else [])
+                made = totals(whole, DIMENSIONS, OF_ALL) if whole is not None else []
+            else:
+                continue
+            if measure in ("gross_stock", "retirements"):
+                made = _without_gaps(made, blocks)
+            out.extend(made)
+    return out
+
+
+def _without_gaps(made: Sequence[Block], blocks: Sequence[Block]) -> list[Block]:
+    """Return the totals of gross stocks to which every asset with a net stock adds: the others would be too small."""
+    net = [b for b in blocks if b.key == BlockKey("net_stock", "perpetual_inventory", "constant")]
+    gross = [b for b in blocks if b.key == BlockKey("gross_stock", "perpetual_inventory", "constant")]
+    if not net or not gross:
+        return list(made)
+    lacking = net[0].series.take(net[0].part & (gross[0].series.locate(net[0].series.key) < 0))
+    out = []
+    for total in made:
+        codes = {dim: TOTALS[dim] for dim in DIMENSIONS}
+        summed = {d: c for d, c in codes.items() if bool(total.series.is_code(d, c).all())}
+        whole = ~np.isin(total.series.key, lacking.projected(summed))
+        if whole.any():
+            out.append(total.take(whole))
     return out
 
 
@@ -247,7 +269,8 @@ def _choices(
                     "measure": "net_stock",
                     "asset": codes["asset"][a],
                     "industry": codes["industry"][j],
-                    "message": "no row of rules/assets.csv covers this asset; its stocks are not computed, and missing from totals",
+                    "message": "no row of rules/assets.csv covers this asset; its stocks are not computed, and missing "
+                    "from totals",
                     "expected": "a row for the asset, or for a group that it belongs to",
                     "remedy": "add a row to rules/assets.csv of the assembly",
                 }
