@@ -23,12 +23,10 @@ YEARS = list(range(1985, 2020))
 REFERENCE = 2015
 WINDOW = 10
 BENCHMARK = 2000
-BACKCAST = 2000
-"""Years assumed before the first: of the slowest asset, about 1e-16 of the stock is left out."""
 
-BRANCHES = {"C": "Manufacturing", "J": "Information and communication"}
+BRANCHES = {"H": "Transportation and storage", "J": "Information and communication"}
 GERMAN = {
-    "C": "Verarbeitendes Gewerbe (Industrie) – Hütten und Fabriken",
+    "H": "Güter- und Personenverkehr, Lagerei",
     "J": "Information, Fernmeldewesen und Büro-Datenverarbeitung",
 }
 ASSETS = {
@@ -233,10 +231,14 @@ def neighbour(sources: Path, industry: str) -> Received:
 # --- capital ------------------------------------------------------------------------------------------------
 
 
-def asset_rule(path: Path, asset: str, industry: str) -> dict[str, float | None]:
-    with path.open(encoding="utf-8", newline="") as lines:
-        rows = {(r["asset"], r["industry"]): r for r in csv.DictReader(lines)}
-    row = rows.get((asset, industry)) or rows[asset, "_T"]
+def asset_rule(shipped: Path, own: Path, asset: str, industry: str) -> dict[str, float | None]:
+    """Read the row for the asset and industry, else for the asset; own rows of an asset replace the shipped ones."""
+    rows = {}
+    for path in (own, shipped):
+        mine = [row for row in records(path, "utf-8", ",") if row["asset"] == asset]
+        rows = rows or {row["industry"]: row for row in mine}
+    row = rows.get(industry) or rows["_T"]
+    assert row["retirement"] in ("", "simultaneous")
     names = ("rate", "life", "gross_life", "b", "discount_rate")
     return {name: float(row[name]) if row[name] else None for name in names}
 
@@ -306,7 +308,18 @@ def year_end_prices(index: Series) -> Series:
     return out
 
 
-def produced(account: Account, files: Received, rules: Path, asset: str) -> None:
+def years_assumed(rule: dict[str, float | None], g: float) -> int:
+    """Return how many years before the first are needed: a whole life, or until 1e-14 of the stock is left out."""
+    whole_life = math.ceil(rule["life"] or rule["gross_life"] or 0)
+    rate = rule["rate"]
+    return (
+        whole_life
+        if rate is None
+        else whole_life + math.ceil(math.log(1e-14) / math.log((1 - rate) / (1 + g)))
+    )
+
+
+def produced(account: Account, files: Received, asset: str, rule: dict[str, float | None]) -> None:
     """Vintages of one asset, its stocks, what it loses, at all prices."""
     current, index = files.investment[asset], files.price[asset]
     volume = account.put(
@@ -318,10 +331,9 @@ def produced(account: Account, files: Received, rules: Path, asset: str) -> None
     before = YEARS[0] - 1
     account.put("trend_growth", "log_linear_trend", "_Z", asset, {before: g})
     account.put("trend_investment", "log_linear_trend", "constant", asset, {before: first})
-    assumed = [first / (1 + g) ** j for j in range(BACKCAST, 0, -1)]
+    assumed = [first / (1 + g) ** j for j in range(years_assumed(rule, g), 0, -1)]
     observed = [volume[y] for y in YEARS]
-    count = len(assumed) + len(observed)
-    productive, net, gross = weights(asset_rule(rules / "assets.csv", asset, files.industry), count)
+    productive, net, gross = weights(rule, len(assumed) + len(observed))
     stocks = {"productive_stock": productive, "net_stock": net} | (
         {} if gross is None else {"gross_stock": gross}
     )
@@ -394,10 +406,10 @@ def chained(growth: Series) -> Series:
     return out
 
 
-def account_of(files: Received, rules: Path) -> Account:
+def account_of(files: Received, shipped: Path, own: Path) -> Account:
     account = Account()
     for asset in files.investment:
-        produced(account, files, rules, asset)
+        produced(account, files, asset, asset_rule(shipped, own, asset, files.industry))
     base = {y: files.value_added[y] - files.taxes[y] for y in YEARS}
     labour = {y: files.labour_income(y) for y in YEARS}
     share = {y: labour[y] / base[y] for y in YEARS}
@@ -451,7 +463,7 @@ def test_the_panel_holds_what_the_files_give(
     panel: duckdb.DuckDBPyConnection,
 ) -> None:
     files = read(demo_build / "sources", industry)
-    account = account_of(files, root / "rules")
+    account = account_of(files, root / "rules" / "assets.csv", demo_build / "rules" / "assets.csv")
     compared = 0
     for (measure, method, basis, asset), expected in account.figures.items():
         # Labour input is a measure of workers: its asset is `_Z`, its worker group the total.

@@ -68,7 +68,8 @@ class Panel:
         rows = self.rows(
             """
             select s.series_id, s.industry, s.asset, s.measure, s.method, s.unit, s.unit_mult, s.chosen,
-                   f.period, f.value, o.code, 1 - f.imputed_part - f.assumed_part, f.imputed_part, f.assumed_part
+                   f.period, f.value, o.code, 1 - f.imputed_part::double - f.assumed_part::double,
+                   f.imputed_part::double, f.assumed_part::double
             from series s join figure f using (series_id)
             join code o on o.list = 'obs_status' and o.position = f.obs_status
             where s.area = ? and s.sector = ? and s.measure = ? and s.price_basis = ?

@@ -103,6 +103,7 @@ def test_every_term_can_be_followed(first):
     assert [(i.role, i.period) for i in inputs] == [
         *(("investment", str(year)) for year in (1999, 1998, 1997, 1996)),
         ("opening_stock", "1995"),
+        ("growth", "1995"),
     ]
     assert all(trace(first, i.series, int(i.period)).reproduced for i in inputs)
 
