@@ -254,9 +254,10 @@ class Sums:
         A = files.areas
         for key, values in self.industries.items():
             first = start.get(key, 0)
-            files.put(key, values, {"area": A, "industry": INDUSTRIES, "asset": ("_T",)}, first)
-            files.put(key, values.sum(axis=2), {"area": A, "industry": ("_T",), "asset": ("_T",)}, first)
             by_asset = self.assets[key]
+            if len(by_asset) == len(ASSETS):  # a total to which an asset does not add would be too small
+                files.put(key, values, {"area": A, "industry": INDUSTRIES, "asset": ("_T",)}, first)
+                files.put(key, values.sum(axis=2), {"area": A, "industry": ("_T",), "asset": ("_T",)}, first)
             axes = {"area": A, "industry": ("_T",), "asset": tuple(by_asset)}
             files.put(key, np.stack(list(by_asset.values()), axis=2), axes, first)
 
