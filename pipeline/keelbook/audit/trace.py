@@ -10,7 +10,7 @@ from keelbook.audit.reading import Build, Cell, Link, Series, projected, with_me
 from keelbook.blocks import DIMS, F8, Choice
 from keelbook.errors import DeclarationError, NotReproduced, Problem, nearest
 from keelbook.lineage.formula import Formula, Setting, values_of
-from keelbook.lineage.primitives import Groups
+from keelbook.lineage.primitives import Groups, Rule
 from keelbook.stages.catalogue import FORMULAS
 
 TOLERANCE = 1e-12
@@ -154,24 +154,65 @@ def trace(build: Build, series: Series, year: int) -> Traced:
                 remedy="choose another year",
             )
         )
+    again = re_perform(build, series)
     name, equation, citation = build.formulas(series.formula_id)
-    choices = build.choices(series.method_set)
-    formula = FORMULAS[name]
+    terms = list(again.rule.terms(again.x, (row, 0)))
+    inputs = tuple(
+        again.lines[t.role].as_input(build, t.row, t.column, t.value, t.weight, t.contribution) for t in terms
+    )
+    return Traced(
+        series,
+        year,
+        float(values[row]),
+        float(again.value[row]),
+        again.allowed(row),
+        name,
+        equation,
+        citation,
+        build.choices(series.method_set),
+        inputs,
+    )
+
+
+@dataclass(frozen=True, eq=False)
+class Again:
+    """A whole series computed again: its rule, the inputs lined up, and the values (T,)."""
+
+    rule: Rule
+    lines: Sequence["_Line"]
+    x: Sequence[F8]
+    value: F8
+
+    def allowed(self, row: int) -> float:
+        """Return how far the stored figure of a row may differ: 1e-12 of the sizes of its terms."""
+        sizes = sum(abs(term.contribution) for term in self.rule.terms(self.x, (row, 0)))
+        return TOLERANCE * (sizes + abs(float(self.value[row])))
+
+
+def re_perform(build: Build, series: Series) -> Again:
+    """Compute a series again from its stored inputs, with the formula and parameters the build records."""
+    formula = FORMULAS[build.formulas(series.formula_id)[0]]
     lines = _line_up(build, series, formula)
     width = len(lines[0].columns) if formula.kind == "group" else 1
     groups = Groups(np.zeros(width, np.int32), 1)
-    setting = Setting(values_of([choices]), np.zeros(1, np.int32), build.periods, groups)
-    rule = formula.build(setting)
+    choices = values_of([build.choices(series.method_set)])
+    rule = formula.build(Setting(choices, np.zeros(1, np.int32), build.periods, groups))
     x = [line.value for line in lines]
-    again = float(rule.compute(*x)[row, 0])
-    terms = list(rule.terms(x, (row, 0)))
-    inputs = tuple(
-        lines[t.role].as_input(build, t.row, t.column, t.value, t.weight, t.contribution) for t in terms
-    )
-    size = sum(abs(t.contribution) for t in terms) + abs(again)
-    return Traced(
-        series, year, float(values[row]), again, TOLERANCE * size, name, equation, citation, choices, inputs
-    )
+    return Again(rule, lines, x, rule.compute(*x)[:, 0])
+
+
+def differing(build: Build, series: Series, years: Sequence[int]) -> list[tuple[int, float, float]]:
+    """Return year, stored and recomputed figure of those years in which a series is not reproduced."""
+    again = re_perform(build, series)
+    stored = build.values([series.series_id])[:, 0]
+    out = []
+    for year in years:
+        row = year - build.periods.start
+        gap = abs(stored[row] - again.value[row])
+        # The terms are only gone through where the figures are not equal to the last digits anyway.
+        if not gap <= TOLERANCE * abs(again.value[row]) and not gap <= again.allowed(row):
+            out.append((year, float(stored[row]), float(again.value[row])))
+    return out
 
 
 def must_reproduce(traced: Traced) -> None:

@@ -1,10 +1,11 @@
 """Verify: files against their hashes, and figures against their own re-performance."""
 
+from itertools import groupby
 from pathlib import Path
 from typing import Any
 
 from keelbook.audit.reading import Build, panel_path
-from keelbook.audit.trace import trace
+from keelbook.audit.trace import differing
 from keelbook.errors import NotReproduced, Problem
 from keelbook.store.generations import MANIFEST, changed_files
 
@@ -44,16 +45,16 @@ def verify(place: Path, per_form: int | None) -> dict[str, Any]:
             (per_form, per_form or 1),
         )
         by_number = {s.series_id: s for s in build.series({})} if chosen else {}
-        for number, year in chosen:
-            traced = trace(build, by_number[number], year)
-            if not traced.reproduced:
+        for number, pairs in groupby(chosen, key=lambda pair: pair[0]):
+            series = by_number[number]
+            for year, stored, again in differing(build, series, [year for _, year in pairs]):
                 problems.append(
                     Problem(
                         "the stored figure differs from its re-performance",
                         str(build.path),
-                        f"{traced.series.label} in {traced.year}",
-                        found=repr(traced.stored),
-                        expected=repr(traced.recomputed),
+                        f"{series.label} in {year}",
+                        found=repr(stored),
+                        expected=repr(again),
                         remedy="do not use this build: assemble again, and ask who changed the file",
                     )
                 )
