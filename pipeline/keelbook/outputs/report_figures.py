@@ -94,6 +94,10 @@ class Place:
         return [f"decomposition: {reason} ({first}–{last})" for reason, first, last in rows]
 
 
+SHORT = {"sum_of_industries": "summed", "fixed_fraction": "fraction"}
+"""Labels of methods on small charts, where their full names do not fit; the tables have those."""
+
+
 def section(panel: Panel, area: str, sector: str, number: int) -> Section:
     """Return the section of one area and sector of a panel."""
     place = Place(panel, area, sector, f"s{number}")
@@ -194,7 +198,7 @@ def shares(place: Place) -> Figure:
         curves = [
             Curve(
                 s.method.replace("_", " ").capitalize() + (" (used)" if s.chosen else ""),
-                s.method.replace("_", " "),
+                SHORT.get(s.method, s.method.replace("_", " ")),
                 _times(s.values, 100),
                 colours[s.method],
                 s.chosen,
