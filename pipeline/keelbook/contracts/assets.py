@@ -22,8 +22,19 @@ REFERENCE_TABLES = ("bea_1997", "bea_structures", "bea_intellectual_property")
 
 Efficiency = Literal["cohort_geometric", "geometric", "hyperbolic", "linear", "constant"]
 AgePrice = Literal["straight_line", "declining_balance"]
+InitialStock = Literal[
+    "steady_state",
+    "backcast_growth",
+    "backcast_indicator",
+    "capital_output_ratio",
+    "zero",
+    "benchmark",
+    "benchmarks_spread",
+    "two_benchmarks",
+]
 
 _NUMBERS = ("rate", "life", "declining_balance_rate", "gross_life", "b", "discount_rate")
+_START = ("initial_stock", "initial_growth", "capital_output_ratio")
 _NEEDS: Mapping[str, tuple[str, ...]] = {
     "cohort_geometric": (),
     "geometric": ("rate", "life", "retirement", "discount_rate"),
@@ -57,6 +68,9 @@ class AssetRow(Declared):
     b: float | None = Field(None, le=1)
     retirement: str | None = None
     discount_rate: float | None = Field(None, gt=-1)
+    initial_stock: InitialStock | None = None
+    initial_growth: float | None = Field(None, gt=-1)
+    capital_output_ratio: float | None = Field(None, gt=0)
     citation: str
     status: Mark
     line: int
@@ -124,6 +138,7 @@ class AssetRow(Declared):
                         remedy=f"give {name}, or choose another form",
                     )
                 )
+        found += self._start_faults()
         if cohort:
             found += self._cohort_faults()
         elif not found and (patterns := (info.context or {})["patterns"]) is not None:
@@ -131,6 +146,45 @@ class AssetRow(Declared):
         if found:
             raise faults(found)
         return self
+
+    def _start_faults(self) -> list[PydanticCustomError]:
+        """A number that the declared starting stock does not use, or lacks, or that leads nowhere."""
+        found = []
+        for name, method in (
+            ("initial_growth", "backcast_growth"),
+            ("capital_output_ratio", "capital_output_ratio"),
+        ):
+            if getattr(self, name) is not None and self.initial_stock not in (None, method):
+                found.append(
+                    fault(
+                        f"'{name}' contradicts initial_stock {self.initial_stock}",
+                        at=(name,),
+                        found=f"{name} {getattr(self, name):g}",
+                        expected=f"an empty cell, or initial_stock {method}",
+                        remedy="correct one of the two",
+                    )
+                )
+        if self.initial_stock == "capital_output_ratio" and self.capital_output_ratio is None:
+            found.append(
+                fault(
+                    "initial_stock capital_output_ratio without the ratio",
+                    found="an empty cell",
+                    expected="capital_output_ratio: net stock over value added, at the same prices",
+                    remedy="give capital_output_ratio",
+                )
+            )
+        rate = self.rate if self.efficiency == "cohort_geometric" else None
+        if rate is not None and self.initial_growth is not None and rate + self.initial_growth <= 0:
+            found.append(
+                fault(
+                    "growth plus depreciation is not above 0: no past has that stock",
+                    at=("initial_growth",),
+                    found=f"initial_growth {self.initial_growth:g}, rate {rate:g}",
+                    expected=f"initial_growth above {-rate:g}",
+                    remedy="correct one of the two",
+                )
+            )
+        return found
 
     def _without_weights(self, pattern: RetirementPattern) -> list[PydanticCustomError]:
         """Some values are possible each, but not together: the arithmetic itself says so, whatever the timing."""
@@ -267,6 +321,9 @@ class AssetRule:
     b: float | None
     retirement: str | None
     discount_rate: float | None
+    initial_stock: InitialStock | None
+    initial_growth: float | None
+    capital_output_ratio: float | None
     citation: str
     status: Mark
     file: str
@@ -278,7 +335,7 @@ class AssetRule:
         cited = f"{self.citation} [{self.status}]"
         out = [
             Parameter(f"asset.{name}", getattr(self, name), self.file, self.line, cited)
-            for name in ("efficiency", "age_price", *_NUMBERS, "retirement")
+            for name in ("efficiency", "age_price", *_NUMBERS, "retirement", *_START)
             if getattr(self, name) is not None
         ]
         if self.pattern is not None:

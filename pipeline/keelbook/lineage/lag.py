@@ -7,7 +7,7 @@ import numpy as np
 
 from keelbook.blocks import B1, F4, F8, I4, I8
 from keelbook.lineage.primitives import Parts, Term, _ratio
-from keelbook.methods.initial_stock import opening_stock_profile, opening_vintages
+from keelbook.methods.initial_stock import missing_part, opening_stock_profile, opening_vintages
 from keelbook.methods.perpetual_inventory import cohort_stock
 
 
@@ -165,6 +165,48 @@ class Lag:
 
     def combine(self, x: Sequence[F8], terms: Sequence[Term]) -> float:
         return float(np.sum([t.contribution for t in terms]))
+
+
+@dataclass(frozen=True, eq=False)
+class WarmUp:
+    """`own` from a stock of zero, masked until the stock lacks at most a part `limit` of what it would be.
+
+    Arguments: flow, and the opening stock that is left out with its growth, as `Lag` takes them. The part is
+    K_ss / (K + K_ss), K the stock from zero and K_ss what is left of the opening that was not entered; from the
+    first period in which it is at most the limit, all are kept. Source: methods.md section 3.
+    """
+
+    own: Lag
+    stock: Lag
+    limit: float
+
+    def _kept(self, flow: F8, left_out: F8, growth: F8) -> B1:
+        missing = self.stock.compute(np.where(np.isfinite(flow), 0.0, np.nan), left_out, growth)
+        held = self.stock.compute(flow, 0 * left_out, growth)
+        with np.errstate(invalid="ignore", divide="ignore"):
+            part = missing_part(missing, held)
+        return np.logical_or.accumulate((part >= 0) & (part <= self.limit), axis=0)
+
+    def compute(self, *x: F8) -> F8:
+        flow, left_out, growth = x
+        return np.where(self._kept(*x), self.own.compute(flow, 0 * left_out, growth), np.nan)
+
+    def mix(self, x: Sequence[F8], y: F8, kinds: Sequence[Parts]) -> list[F4 | None]:
+        flow, left_out, growth = x
+        from_zero = (flow, 0 * left_out, growth)
+        return self.own.mix(from_zero, self.own.compute(*from_zero), kinds)
+
+    def terms(self, x: Sequence[F8], at: tuple[int, int]) -> Iterator[Term]:
+        flow, left_out, growth = x
+        for term in self.own.terms((flow, 0 * left_out, growth), at):
+            if term.role == 1:
+                value = float(left_out[term.row, term.column])
+                yield Term(1, term.row, term.column, value, 0.0, 0.0)
+            else:
+                yield term
+
+    def combine(self, x: Sequence[F8], terms: Sequence[Term]) -> float:
+        return self.own.combine(x, terms)
 
 
 def _tabled(kernel: TableKernel, flow: F8, opening: F8, growth: F8, o: I8) -> F8:
