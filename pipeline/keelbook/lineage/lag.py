@@ -29,7 +29,15 @@ class GeometricKernel:
         out[1:] = self.second * self.keep ** np.arange(max(count - 1, 0))
         return out
 
-    def remainder(self, growth: F8, count: int) -> F8:
+    def at(self, row: int, count: int) -> F8:
+        """Return the weights of the flows of a period and the ones before it."""
+        return self.weights(count)
+
+    def from_vintage(self, row: int, count: int) -> F8:
+        """Return the weights of the flow of a period in that period and later ones."""
+        return self.weights(count)
+
+    def remainder(self, growth: F8, count: int, opens: int = 0) -> F8:
         """Return the weight of the opening stock after 1..count periods, (count, N); growth cancels out."""
         ages = np.arange(count)[:, None]
         return self.second / self.of_opening * self.keep**ages * np.ones_like(growth)
@@ -48,7 +56,13 @@ class TableKernel:
         out[:n] = self.table[:n]
         return out
 
-    def remainder(self, growth: F8, count: int) -> F8:
+    def at(self, row: int, count: int) -> F8:
+        return self.weights(count)
+
+    def from_vintage(self, row: int, count: int) -> F8:
+        return self.weights(count)
+
+    def remainder(self, growth: F8, count: int, opens: int = 0) -> F8:
         """Return the weight of the opening stock after 1..count periods, (count, N).
 
         The opening stock is sum_v stock(v) I (1+g)^-(v+1) of vintages that grew at g (methods.md section 3),
@@ -58,7 +72,59 @@ class TableKernel:
         return np.asarray(later / opening_stock_profile(np.ones_like(growth), growth, self.stock))
 
 
-Kernel = GeometricKernel | TableKernel
+@dataclass(frozen=True, eq=False)
+class BandKernel:
+    """Weights that differ between periods: band[t, s] of the flow of row s in row t, (T, T).
+
+    base: the kernel of the vintages in the opening stock. left[t, o]: the weight in row t of a stock that opens in
+    row o, where rates change for all that is alive; None where the opening follows `base`, whatever comes later.
+    """
+
+    band: F8
+    base: GeometricKernel | TableKernel
+    left: F8 | None = None
+
+    def at(self, row: int, count: int) -> F8:
+        return self.band[row, row - count + 1 : row + 1][::-1]
+
+    def from_vintage(self, row: int, count: int) -> F8:
+        return self.band[row : row + count, row]
+
+    def remainder(self, growth: F8, count: int, opens: int = 0) -> F8:
+        """Return the weight of the opening stock of row `opens` after 1..count periods, (count, N)."""
+        if self.left is None:
+            return self.base.remainder(growth, count)
+        return self.left[opens + 1 : opens + 1 + count, opens, None] * np.ones_like(growth)
+
+
+def of_vintages(kernels: Sequence[GeometricKernel | TableKernel], of_row: I8) -> BandKernel:
+    """Return the weights of flows of which row s has kernel of_row[s] for ever; the opening has that of row 0."""
+    T = len(of_row)
+    band = np.zeros((T, T))
+    for s in range(T):
+        band[s:, s] = kernels[of_row[s]].weights(T - s)
+    return BandKernel(band, kernels[of_row[0]])
+
+
+def of_periods(kernels: Sequence[GeometricKernel], of_row: I8, *, loss: bool) -> BandKernel:
+    """Return the weights where the rate of row t holds for all that is alive in it: W_t = k_t W_(t-1) + w_t(0) I_t.
+
+    kernels: of the stock. loss: the weights of what is lost, (1 - w_t(0)) I_t + (1 - k_t) W_(t-1), are returned.
+    """
+    T = len(of_row)
+    keep, first = (np.array([getattr(kernels[i], name) for i in of_row]) for name in ("keep", "first"))
+    band, left = np.zeros((T, T)), np.zeros((T, T))
+    for s in range(T):
+        kept = np.cumprod(keep[s + 1 :])
+        before = np.concatenate(([1.0], kept[:-1]))[: len(kept)]
+        later = (1 - keep[s + 1 :]) * before if loss else kept
+        band[s, s] = 1 - first[s] if loss else first[s]
+        band[s + 1 :, s] = first[s] * later
+        left[s + 1 :, s] = later
+    return BandKernel(band, kernels[of_row[0]], left)
+
+
+Kernel = GeometricKernel | TableKernel | BandKernel
 
 
 @dataclass(frozen=True, eq=False)
@@ -155,10 +221,10 @@ class Lag:
         flow, opening, growth = (v[:, n : n + 1] for v in x)
         o = int(self._start(flow, opening)[0][0])
         kernel = self.kernels[self.which[n]]
-        for v, w in enumerate(kernel.weights(t - o)):
+        for v, w in enumerate(kernel.at(t, t - o)):
             value = float(flow[t - v, 0])
             yield Term(0, t - v, n, value, float(w), float(w) * value)
-        rest = float(kernel.remainder(growth[o], t - o)[-1, 0])
+        rest = float(kernel.remainder(growth[o], t - o, o)[-1, 0])
         value = float(opening[o, 0])
         yield Term(1, o, n, value, rest, rest * value)
         yield Term(2, o, n, float(growth[o, 0]), 0.0, 0.0)
@@ -209,11 +275,14 @@ class WarmUp:
         return self.own.combine(x, terms)
 
 
-def _tabled(kernel: TableKernel, flow: F8, opening: F8, growth: F8, o: I8) -> F8:
+def _tabled(kernel: TableKernel | BandKernel, flow: F8, opening: F8, growth: F8, o: I8) -> F8:
     """Return the sums of series that share one table of weights."""
-    y = cohort_stock(np.ascontiguousarray(flow), kernel.weights(min(len(flow), len(kernel.table))))
+    if isinstance(kernel, BandKernel):
+        y = kernel.band @ flow
+    else:
+        y = cohort_stock(np.ascontiguousarray(flow), kernel.weights(min(len(flow), len(kernel.table))))
     for start, columns, count in _starts(o, len(flow)):
-        y[start + 1 :, columns] += kernel.remainder(growth[columns], count) * opening[columns]
+        y[start + 1 :, columns] += kernel.remainder(growth[columns], count, start) * opening[columns]
     return y
 
 

@@ -22,13 +22,19 @@ ROUNDING = 1e-12
 
 
 class _Vintages(NamedTuple):
-    """opens (M,), live (T, M), weights by age (T, M), flow and what is left of the opening (T, M)."""
+    """opens (M,), live (T, M), flow and what is left of the opening (T, M), and the kernel of each column."""
 
     opens: I8
     live: B1
-    weights: F8
     flow: Array
     left: Array
+    kernels: Sequence[Kernel]
+    which: I4
+
+    def from_row(self, row: int) -> F8:
+        """Return the weights of the flow of a row in that row and the later ones, (T - row, M)."""
+        count = len(self.flow) - row
+        return np.stack([k.from_vintage(row, count) for k in self.kernels], axis=1)[:, self.which]
 
 
 def _vintages(kernels: Sequence[Kernel], flow: Array, opening: Array, growth: Array, which: I4) -> _Vintages:
@@ -38,18 +44,15 @@ def _vintages(kernels: Sequence[Kernel], flow: Array, opening: Array, growth: Ar
     rows = np.arange(T)[:, None]
     live = np.logical_and.accumulate(np.isfinite(flow) | (rows <= opens), axis=0)
     live &= (rows > opens) & held.any(axis=0)
-    weights = np.zeros((T, M))
     left = np.zeros((T, M), np.result_type(flow, opening, growth))
     for i, kernel in enumerate(kernels):
         mine = which == i
-        if mine.any():
-            weights[:, mine] = kernel.weights(T)[:, None]
         for start in np.unique(opens[mine]):
             columns = mine & (opens == start)
             if T - start > 1:
-                rest = kernel.remainder(growth[start, columns], T - int(start) - 1)
+                rest = kernel.remainder(growth[start, columns], T - int(start) - 1, int(start))
                 left[start + 1 :, columns] = rest * opening[start, columns]
-    return _Vintages(opens, live, weights, flow, left)
+    return _Vintages(opens, live, flow, left, kernels, which)
 
 
 def _survive(v: _Vintages, change: Array, target: Array) -> tuple[Array, Array]:
@@ -57,12 +60,12 @@ def _survive(v: _Vintages, change: Array, target: Array) -> tuple[Array, Array]:
     T, M = v.flow.shape
     dtype = np.result_type(v.left, change, target)
     part, stock = np.full((T, M), np.nan, dtype), np.full((T, M), np.nan, dtype)
-    scaled = np.zeros((T, M), dtype)
+    ahead = v.left.astype(dtype)
     before, met = np.ones(M, dtype), np.zeros(M, bool)
     for t in range(T):
         live = v.live[t]
-        scaled[t] = np.where(live, v.flow[t] / before, 0)
-        of_vintages = (v.weights[: t + 1] * scaled[t::-1]).sum(axis=0) + v.left[t]
+        ahead[t:] += v.from_row(t) * np.where(live, v.flow[t] / before, 0)
+        of_vintages = ahead[t]
         now = before + np.where(np.isfinite(change[t]), change[t] / of_vintages, 0)
         hit = np.isfinite(target[t]) & live & ~met
         now = np.where(hit, target[t] / of_vintages, now)

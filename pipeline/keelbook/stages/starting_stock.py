@@ -23,7 +23,16 @@ from keelbook.blocks import (
 from keelbook.lineage.benchmark import BenchmarkFactor
 from keelbook.lineage.derive import Given, derive, given, line_up
 from keelbook.lineage.formula import Formula, Role, Setting
-from keelbook.lineage.lag import GeometricKernel, Kernel, Lag, TableKernel, WarmUp
+from keelbook.lineage.lag import (
+    BandKernel,
+    GeometricKernel,
+    Kernel,
+    Lag,
+    TableKernel,
+    WarmUp,
+    of_periods,
+    of_vintages,
+)
 from keelbook.lineage.path import Path
 from keelbook.lineage.primitives import Each, Span, Spans
 from keelbook.lineage.volume_changes import backcast, even_change
@@ -80,8 +89,44 @@ def _cohort_geometric(choices: Mapping[str, Any]) -> bool:
     return choices.get("asset.efficiency") == COHORT_GEOMETRIC
 
 
-def kernel(measure: str, choices: Mapping[str, Any], length: int) -> Kernel:
-    """Return the weights of one measure, as a recursion where the form has one."""
+LATER = "@"
+"""Between the name of an asset parameter and the year from which it holds."""
+
+
+def vintages_of(choices: Mapping[str, Any]) -> dict[int | None, dict[str, Any]]:
+    """Return the asset parameters by the year from which they hold, None first: for what is before all of them."""
+    named = [(name.partition(LATER), value) for name, value in choices.items()]
+    base = {name: value for (name, _, year), value in named if not year}
+    common = {name: value for name, value in base.items() if not name.startswith("asset.")}
+    out: dict[int | None, dict[str, Any]] = {None: base}
+    for year in sorted({int(year) for (_, _, year), _ in named if year}):
+        out[year] = common | {name: value for (name, _, since), value in named if since == str(year)}
+    return out
+
+
+def kernel(measure: str, choices: Mapping[str, Any], periods: range) -> Kernel:
+    """Return the weights of one measure: by age alone, or also by period where parameters hold from a year on."""
+    by_year = vintages_of(choices)
+    if len(by_year) == 1:
+        return even_kernel(measure, choices, len(periods))
+    since = [-np.inf if year is None else year for year in by_year]
+    of_row = np.searchsorted(since, list(periods), side="right") - 1
+    if choices.get("asset.applies_to") == "stock" and _WEIGHTS_OF[measure] not in ("gross", "retirements"):
+        stock = LOSSES.get(measure, measure)
+        rates = [even_kernel(stock, c, len(periods)) for c in by_year.values()]
+        geometric = [k for k in rates if isinstance(k, GeometricKernel)]
+        return of_periods(geometric, of_row, loss=measure in LOSSES)
+    return of_vintages([even_kernel(measure, c, len(periods)) for c in by_year.values()], of_row)
+
+
+def opening_kernel(measure: str, choices: Mapping[str, Any], periods: range) -> GeometricKernel | TableKernel:
+    """Return the weights of the vintages in an opening stock: those of the period before the first."""
+    found = kernel(measure, choices, periods)
+    return found.base if isinstance(found, BandKernel) else found
+
+
+def even_kernel(measure: str, choices: Mapping[str, Any], length: int) -> GeometricKernel | TableKernel:
+    """Return the weights of one measure by age, as a recursion where the form has one."""
     weights = weights_of(choices, max(length, 3))
     own: F8 = getattr(weights, _WEIGHTS_OF[measure])
     stock: F8 = getattr(weights, _WEIGHTS_OF[LOSSES.get(measure, measure)])
@@ -189,7 +234,7 @@ BACKCAST = Formula(
 
 def _steady_state(measure: str) -> Callable[[Setting], Each]:
     def build(s: Setting) -> Each:
-        kernels = [kernel(measure, c, len(s.periods)) for c in s.sets]
+        kernels = [opening_kernel(measure, c, s.periods) for c in s.sets]
 
         def opening(investment: F8, growth: F8, which: F8) -> F8:
             investment, growth, which = np.broadcast_arrays(investment, growth, which)
@@ -230,7 +275,7 @@ OPENING = {measure: _opening_formula(measure) for measure in STOCKS}
 
 def lag(measure: str) -> Callable[[Setting], Lag]:
     """Return the builder of the sum over vintages of one measure."""
-    return lambda s: Lag(tuple(kernel(measure, c, len(s.periods)) for c in s.sets), s.which)
+    return lambda s: Lag(tuple(kernel(measure, c, s.periods) for c in s.sets), s.which)
 
 
 def _factor_formula(measure: str) -> Formula:
@@ -308,7 +353,7 @@ FROM_ZERO = {
 
 
 def _kernels(s: Setting) -> list[Kernel]:
-    return [kernel("net_stock", c, len(s.periods)) for c in s.sets]
+    return [kernel("net_stock", c, s.periods) for c in s.sets]
 
 
 EVEN_CHANGE = Formula(
@@ -716,7 +761,7 @@ def solved_rates(
         if which[n] < 0:
             continue
         choices = {c.name: c.value for c in sets[which[n]]}
-        if method_of(choices) != "two_benchmarks":
+        if method_of(choices) != "two_benchmarks" or len(vintages_of(choices)) > 1:
             continue
         flow, stock = investment.value[:, n], benchmark.value[:, columns[n]]
         there = np.flatnonzero(np.isfinite(stock))
@@ -788,7 +833,8 @@ def defined(measure: str, sets: tuple[MethodSet, ...]) -> Any:
 
 
 def _set_defines(measure: str, choices: Mapping[str, Any]) -> bool:
-    return getattr(weights_of(choices, 3), _WEIGHTS_OF[measure]) is not None
+    every = vintages_of(choices).values()
+    return all(getattr(weights_of(c, 3), _WEIGHTS_OF[measure]) is not None for c in every)
 
 
 ROUNDING = 1e-12
@@ -799,11 +845,14 @@ def _prices_against_rate(investment: Block, sets: tuple[MethodSet, ...], which: 
     """Return a finding for each set whose declared prices by age imply an efficiency below zero or rising with age."""
     out = []
     for i, choices in enumerate({c.name: c.value for c in s} for s in sets):
-        if "asset.age_price" not in choices or not (which == i).any():
+        if not (which == i).any():
             continue
-        efficiency = weights_of(choices, 1).productive
-        before = np.concatenate(([1.0], efficiency[:-1]))
-        bad = np.flatnonzero((efficiency < -ROUNDING) | (efficiency > before + ROUNDING))
+        bad, efficiency, before = np.zeros(0, np.int64), np.zeros(0), np.zeros(0)
+        for own in vintages_of(choices).values():
+            if "asset.age_price" in own and not len(bad):
+                efficiency = weights_of(own, 1).productive
+                before = np.concatenate(([1.0], efficiency[:-1]))
+                bad = np.flatnonzero((efficiency < -ROUNDING) | (efficiency > before + ROUNDING))
         if not len(bad):
             continue
         v = int(bad[0])

@@ -24,6 +24,7 @@ from keelbook.stages.starting_stock import (
     StartInputs,
     StartParams,
     defined,
+    even_kernel,
     kernel,
     lag,
     nothing,
@@ -102,7 +103,7 @@ SURVIVING = Formula(
         Role("opening_stock"),
         Role("growth", counted=False),
     ),
-    build=lambda s: Path(surviving([kernel("net_stock", c, len(s.periods)) for c in s.sets]), s.which),
+    build=lambda s: Path(surviving([kernel("net_stock", c, s.periods) for c in s.sets]), s.which),
     kind="series",
 )
 
@@ -513,7 +514,7 @@ def _half_lives(choices: Mapping[str, Any], growth: F8) -> str:
             text += f", its part halves every {half_life_of_part(rate, float(growth[0])):.1f} years"
         return text
     g = growth[:1] if len(growth) else np.zeros(1)
-    left = kernel("net_stock", choices, 3).remainder(g, HORIZON)[:, 0]
+    left = even_kernel("net_stock", choices, 3).remainder(g, HORIZON)[:, 0]
     return f"less than half of a starting stock is left after {int(np.argmax(left < 0.5)) + 1} years"
 
 

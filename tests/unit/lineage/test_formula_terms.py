@@ -189,6 +189,11 @@ def _asset(timing: str, mode: str = "pooled", **parameters: Any) -> dict[str, An
     return {"capital.timing": timing, "capital.age_price_mode": mode, **given}
 
 
+def _from_2006(**parameters: Any) -> dict[str, Any]:
+    """Return parameters that hold from 2006 on."""
+    return {f"asset.{name.replace('__', '.')}@2006": value for name, value in parameters.items()}
+
+
 AT_ONCE = {"retirement__distribution": "simultaneous"}
 NORMAL = {
     "retirement__distribution": "truncated_normal",
@@ -204,6 +209,14 @@ ASSETS = (
     _asset("mid", efficiency="hyperbolic", life=5, b=0.5, discount_rate=0.04, **AT_ONCE),
     _asset("end", "by_life", efficiency="hyperbolic", life=30, b=0.75, discount_rate=0.0, **NORMAL),
     _asset("start", age_price="straight_line", life=8.25, discount_rate=0.03, **AT_ONCE),
+    {
+        **_asset("mid", efficiency="cohort_geometric", rate=0.1, gross_life=6, applies_to="stock", **AT_ONCE),
+        **_from_2006(efficiency="cohort_geometric", rate=0.3, gross_life=4, **AT_ONCE),
+    },
+    {
+        **_asset("end", efficiency="hyperbolic", life=7, b=0.5, discount_rate=0.04, **NORMAL),
+        **_from_2006(efficiency="cohort_geometric", rate=0.2, gross_life=3, **AT_ONCE),
+    },
 )
 
 TAXES = tuple(
