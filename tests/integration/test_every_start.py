@@ -23,7 +23,14 @@ STARTS = {
     "H": "two_benchmarks,,",
     "I": "benchmark,,",
     "J": "steady_state,,",
+    "K": "benchmark,,",
+    "L": "zero,,",
 }
+LATER = {
+    "N1132": "2007,stock,cohort_geometric,0.4,,5,,simultaneous,,,,",
+    "N1133": "2007,,hyperbolic,,4,,0.5,truncated_normal,0.04,,,",
+}
+"""What holds from 2007 on in K and L: a rate for all that is alive, a life for later investment."""
 PROFILES = {
     "N1132": "cohort_geometric,0.3,,7,,simultaneous,",
     "N1133": "hyperbolic,,5,,0.5,truncated_normal,0.04",
@@ -78,7 +85,7 @@ def folder(tmp_path_factory: pytest.TempPathFactory) -> Path:
         "net_stock": [],
         "other_volume_changes": [
             f"{industry},{asset},{year},{change}"
-            for industry in "AGJ"
+            for industry in "AGJKL"
             for asset in PROFILES
             for year, change in ((2006, -30.5), (2009, 12.25))
         ],
@@ -88,7 +95,13 @@ def folder(tmp_path_factory: pytest.TempPathFactory) -> Path:
             for year in range(2004 if industry == "C" else FIRST, LAST + 1):
                 tables["investment"].append(f"{industry},{asset},{year},{rng.uniform(90, 110):.3f}")
         # A stock of H that a rate leads to; one of I that later investment alone exceeds.
-        known = {"F": {2003: 420}, "G": {2002: 300, 2008: 290}, "H": {2002: 310, 2010: 305}, "I": {2004: 30}}
+        known = {
+            "F": {2003: 420},
+            "K": {2003: 420},
+            "G": {2002: 300, 2008: 290},
+            "H": {2002: 310, 2010: 305},
+            "I": {2004: 30},
+        }
         for industry, stocks in known.items():
             tables["net_stock"] += [f"{industry},{asset},{year},{stock}" for year, stock in stocks.items()]
     for name, rows in tables.items():
@@ -106,14 +119,15 @@ def folder(tmp_path_factory: pytest.TempPathFactory) -> Path:
     )
     (folder / "assembly.toml").write_text(declared, encoding="utf-8")
     head = (
-        "asset,industry,efficiency,rate,life,gross_life,b,retirement,discount_rate,"
+        "asset,industry,first_year,applies_to,efficiency,rate,life,gross_life,b,retirement,discount_rate,"
         "initial_stock,initial_growth,capital_output_ratio,citation,status"
     )
     rows = [
-        f"{asset},{industry},{profile},{start},a test,common practice"
+        f"{asset},{industry},,,{profile},{start},a test,common practice"
         for asset, profile in PROFILES.items()
         for industry, start in STARTS.items()
     ]
+    rows += [f"{a},{i},{later},a test,common practice" for a, later in LATER.items() for i in "KL"]
     (folder / "rules" / "assets.csv").write_text("\n".join([head, *rows]) + "\n", encoding="utf-8")
     assemble(folder)
     return folder
@@ -139,8 +153,12 @@ def test_nothing_stops_and_what_was_decided_is_told(built: Build) -> None:
         ("benchmark_too_small", "I", "N1133"),
         ("warm_up", "E", "N1132"),
         ("warm_up", "E", "N1133"),
+        ("warm_up", "L", "N1132"),
+        ("warm_up", "L", "N1133"),
     ]
 
+
+KNOWN = {"F": {2003: 420}, "G": {2002: 300, 2008: 290}, "I": {2004: 30}, "K": {2003: 420}}
 
 METHODS = {
     "A": "steady_state",
@@ -152,6 +170,8 @@ METHODS = {
     "G": "benchmark",
     "H": "benchmark",
     "I": "steady_state",
+    "K": "benchmark",
+    "L": "zero",
 }
 
 
@@ -169,7 +189,7 @@ def test_every_series_starts_as_its_row_says(built: Build, industry: str, asset:
 
 @pytest.mark.parametrize("asset", PROFILES)
 def test_known_stocks_are_met(built: Build, asset: str) -> None:
-    for industry, years in {"F": {2003: 420}, "G": {2002: 300, 2008: 290}, "I": {2004: 30}}.items():
+    for industry, years in KNOWN.items():
         series = find(
             built,
             "net_stock",

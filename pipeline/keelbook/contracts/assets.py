@@ -464,7 +464,9 @@ def _in_time(rules: list[AssetRule], path: Path) -> list[AssetRule]:
     problems, out = [], []
     for (asset, industry), rows in by_key.items():
         first = [rule for rule in rows if rule.first_year is None]
-        later = sorted((rule for rule in rows if rule.first_year is not None), key=lambda r: r.first_year or 0)
+        later = sorted(
+            (rule for rule in rows if rule.first_year is not None), key=lambda r: r.first_year or 0
+        )
         problems += _faults_in_time(first, later, path, f"{asset}, {industry}")
         if first:
             out.append(replace(first[0], later=tuple(later)))
@@ -473,9 +475,7 @@ def _in_time(rules: list[AssetRule], path: Path) -> list[AssetRule]:
     return out
 
 
-def _faults_in_time(
-    first: list[AssetRule], later: list[AssetRule], path: Path, which: str
-) -> list[Problem]:
+def _faults_in_time(first: list[AssetRule], later: list[AssetRule], path: Path, which: str) -> list[Problem]:
     found = []
 
     def wrong(rule: AssetRule, what: str, found_: str, expected: str, remedy: str) -> None:
@@ -491,9 +491,7 @@ def _faults_in_time(
         )
     for rule in first:
         if rule.applies_to is not None:
-            wrong(
-                rule, "applies_to without first_year", rule.applies_to, "an empty cell", "give first_year"
-            )
+            wrong(rule, "applies_to without first_year", rule.applies_to, "an empty cell", "give first_year")
     if len({rule.applies_to or "vintages" for rule in later}) > 1:
         wrong(
             later[-1],

@@ -124,7 +124,37 @@ def of_periods(kernels: Sequence[GeometricKernel], of_row: I8, *, loss: bool) ->
     return BandKernel(band, kernels[of_row[0]], left)
 
 
-Kernel = GeometricKernel | TableKernel | BandKernel
+@dataclass(frozen=True, eq=False)
+class AgedKernel:
+    """The weights of a stock times the age of what is left: exact age `start` in the period of investment."""
+
+    of: GeometricKernel | TableKernel | BandKernel
+    start: float
+
+    def _ages(self, count: int) -> F8:
+        return np.asarray(np.arange(count) + self.start, np.float64)
+
+    def at(self, row: int, count: int) -> F8:
+        return np.asarray(self.of.at(row, count) * self._ages(count))
+
+    def from_vintage(self, row: int, count: int) -> F8:
+        return np.asarray(self.of.from_vintage(row, count) * self._ages(count))
+
+    def remainder(self, growth: F8, count: int, opens: int = 0) -> F8:
+        """Return the weight of the opening stock after 1..count periods, (count, N).
+
+        With q = (1 - d) / (1 + g) its vintages have the mean age start + q / (1 - q) when it opens, by geometric
+        weights, and so t more after t periods; by a table of weights each vintage counts with its own age.
+        """
+        base = self.of.base if isinstance(self.of, BandKernel) else self.of
+        if isinstance(base, TableKernel):
+            return TableKernel(base.table * self._ages(len(base.table)), base.stock).remainder(growth, count)
+        q = base.keep / (1 + growth)
+        ages = np.arange(1, count + 1)[:, None] + self.start + q / (1 - q)
+        return np.asarray(self.of.remainder(growth, count, opens) * ages)
+
+
+Kernel = GeometricKernel | TableKernel | BandKernel | AgedKernel
 
 
 @dataclass(frozen=True, eq=False)
@@ -275,12 +305,16 @@ class WarmUp:
         return self.own.combine(x, terms)
 
 
-def _tabled(kernel: TableKernel | BandKernel, flow: F8, opening: F8, growth: F8, o: I8) -> F8:
+def _tabled(kernel: TableKernel | BandKernel | AgedKernel, flow: F8, opening: F8, growth: F8, o: I8) -> F8:
     """Return the sums of series that share one table of weights."""
-    if isinstance(kernel, BandKernel):
-        y = kernel.band @ flow
-    else:
+    if isinstance(kernel, TableKernel):
         y = cohort_stock(np.ascontiguousarray(flow), kernel.weights(min(len(flow), len(kernel.table))))
+    else:
+        T = len(flow)
+        band = np.zeros((T, T))
+        for s in range(T):
+            band[s:, s] = kernel.from_vintage(s, T - s)
+        y = band @ flow
     for start, columns, count in _starts(o, len(flow)):
         y[start + 1 :, columns] += kernel.remainder(growth[columns], count, start) * opening[columns]
     return y

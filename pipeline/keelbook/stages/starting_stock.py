@@ -24,6 +24,7 @@ from keelbook.lineage.benchmark import BenchmarkFactor
 from keelbook.lineage.derive import Given, derive, given, line_up
 from keelbook.lineage.formula import Formula, Role, Setting
 from keelbook.lineage.lag import (
+    AgedKernel,
     BandKernel,
     GeometricKernel,
     Kernel,
@@ -42,7 +43,7 @@ from keelbook.methods.initial_stock import (
     opening_stock_geometric,
     opening_stock_profile,
 )
-from keelbook.methods.weights import COHORT_GEOMETRIC, Weights, period_end_weights
+from keelbook.methods.weights import AGE_AT_PERIOD_END, COHORT_GEOMETRIC, Weights, period_end_weights
 from keelbook.stages.base import note
 
 STOCKS = ("gross_stock", "productive_stock", "net_stock")
@@ -104,7 +105,9 @@ def vintages_of(choices: Mapping[str, Any]) -> dict[int | None, dict[str, Any]]:
     return out
 
 
-def kernel(measure: str, choices: Mapping[str, Any], periods: range) -> Kernel:
+def kernel(
+    measure: str, choices: Mapping[str, Any], periods: range
+) -> GeometricKernel | TableKernel | BandKernel:
     """Return the weights of one measure: by age alone, or also by period where parameters hold from a year on."""
     by_year = vintages_of(choices)
     if len(by_year) == 1:
@@ -117,6 +120,12 @@ def kernel(measure: str, choices: Mapping[str, Any], periods: range) -> Kernel:
         geometric = [k for k in rates if isinstance(k, GeometricKernel)]
         return of_periods(geometric, of_row, loss=measure in LOSSES)
     return of_vintages([even_kernel(measure, c, len(periods)) for c in by_year.values()], of_row)
+
+
+def aged_kernel(choices: Mapping[str, Any], periods: range) -> AgedKernel:
+    """Return the weights of the net stock times age."""
+    of = kernel("net_stock", choices, periods)
+    return AgedKernel(of, AGE_AT_PERIOD_END[choices["capital.timing"]])
 
 
 def opening_kernel(measure: str, choices: Mapping[str, Any], periods: range) -> GeometricKernel | TableKernel:

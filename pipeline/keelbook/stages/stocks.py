@@ -9,10 +9,12 @@ import numpy as np
 from keelbook.blocks import B1, F8, I4, Block, BlockKey, Choice, Edges, MethodSet, SeriesIndex, merge
 from keelbook.lineage.derive import Given, derive, given
 from keelbook.lineage.formula import Formula, Role
+from keelbook.lineage.lag import Lag
 from keelbook.lineage.path import Path
 from keelbook.lineage.primitives import Each
 from keelbook.lineage.volume_changes import surviving
 from keelbook.methods.initial_stock import half_life, half_life_of_part
+from keelbook.methods.valuation import holding_gains
 from keelbook.stages.base import CHOSEN, Book, Inputs, Result, Stage, keys, missing_input, note
 from keelbook.stages.deflation import by_edges, price_edges
 from keelbook.stages.starting_stock import (
@@ -23,6 +25,7 @@ from keelbook.stages.starting_stock import (
     Start,
     StartInputs,
     StartParams,
+    aged_kernel,
     defined,
     even_kernel,
     kernel,
@@ -139,9 +142,43 @@ CHANGES_OF_STOCK = Formula(
     build=lambda s: Each(lambda stock, part, previous: (part - previous) * stock),
 )
 
+HOLDING_GAINS = Formula(
+    name="holding_gains",
+    equation="HG_t = W_(t-1) (P_t - Pe_(t-1)) + W_t (Pe_t - P_t)",
+    citation="SNA 2008, chapter 12: the change in value from prices alone; flows are valued at average prices",
+    roles=(
+        Role("net_stock_previous", -1),
+        Role("net_stock"),
+        Role("price"),
+        Role("year_end_price"),
+        Role("year_end_price_previous", -1),
+    ),
+    build=lambda s: Each(holding_gains),
+)
+
+VINTAGE_AGES = Formula(
+    name="net_stock_times_age",
+    equation="sum_v (v + a) w(v) I_(t-v) + the same of the opening stock, a the age of new investment at the year's end",
+    citation="OECD, Measuring Capital (2009): the age of a stock is that of its vintages",
+    roles=(Role("investment"), Role("opening_stock"), Role("growth", counted=False)),
+    build=lambda s: Lag(tuple(aged_kernel(c, s.periods) for c in s.sets), s.which),
+    kind="series",
+)
+
+AVERAGE_AGE = Formula(
+    name="average_age",
+    equation="average age_t = net stock times age / net stock",
+    citation="OECD, Measuring Capital (2009): the age of a stock is that of its vintages, weighted by what is left",
+    roles=(Role("vintage_ages"), Role("net_stock")),
+    build=lambda s: Each(lambda aged, stock: aged / np.where(stock == 0, np.nan, stock)),
+)
+
 FORMULAS = (
     *STARTING,
     *VINTAGES.values(),
+    HOLDING_GAINS,
+    VINTAGE_AGES,
+    AVERAGE_AGE,
     SURVIVING,
     BEFORE_CHANGES,
     AFTER_CHANGES,
@@ -217,8 +254,10 @@ def run(inputs: Inputs, params: StocksParams) -> Result:
     findings.extend(_broken_off(work, made["net_stock"]))
     findings.extend(_rests_on_start(work, made["net_stock"]))
     findings.extend(_never_warm(work, made["net_stock"]))
-    valued, problems = _valued(inputs, made, params)
+    blocks.extend(_ages(work, made["net_stock"], extra))
+    valued, problems = _valued(inputs, made, extra, params)
     findings.extend(problems)
+    findings.extend(_unbalanced_at_prices(inputs, work, valued))
     blocks.extend((*made.values(), *valued))
     return Result([*blocks, *_totals(inputs, blocks)], findings)
 
@@ -553,7 +592,7 @@ def _never_warm(work: _Work, net: Block) -> list[dict[str, Any]]:
 def _totals(inputs: Inputs, blocks: Sequence[Block]) -> list[Block]:
     """Return the totals of stocks and losses, over computed and delivered series together."""
     out = []
-    for measure in (*STOCKS, *LOSSES):
+    for measure in (*STOCKS, *LOSSES, "holding_gains"):
         for basis in ("constant", "year_end", "current"):
             forms = [b for b in blocks if (b.key.measure, b.key.price_basis) == (measure, basis)]
             if measure in STOCKS and basis != "current":
@@ -734,10 +773,47 @@ def _unbalanced(
     return out
 
 
+def _ages(work: _Work, net: Block, extra: Sequence[Block]) -> list[Block]:
+    """Return the average age of every net stock; other changes, which hit all vintages alike, leave it as it is."""
+    before = {b.key: b for b in extra}
+    flow = before.get(BlockKey("investment", "before_changes", "constant"))
+    stock = before.get(BlockKey("net_stock", "before_changes", "constant"))
+    begin, out = work.begin, list[Block]()
+    changed = np.zeros(len(net.series), bool) if flow is None else flow.series.locate(net.series.key) >= 0
+    for mine, invested, of in ((~changed, begin.flow, net), (changed, flow, stock)):
+        if not mine.any() or invested is None or of is None:
+            continue
+        taken = net.series.take(mine)
+        aged = derive(
+            VINTAGE_AGES,
+            BlockKey("vintage_ages", "perpetual_inventory", "constant"),
+            taken,
+            net.periods,
+            {
+                "investment": given(invested) if isinstance(invested, Block) else read_for(invested, taken),
+                "opening_stock": read_for(begin.openings["net_stock"], taken),
+                "growth": read_for(begin.growth, taken),
+            },
+            sets=work.sets,
+            which=work.which[work.series.locate(taken.key)],
+            part=False,
+        )
+        age = derive(
+            AVERAGE_AGE,
+            BlockKey("average_age", "perpetual_inventory", "constant"),
+            taken,
+            net.periods,
+            {"vintage_ages": given(aged), "net_stock": given(of)},
+            part=False,
+        )
+        out.extend((aged, age))
+    return out
+
+
 def _valued(
-    inputs: Inputs, made: Mapping[str, Block], params: StocksParams
+    inputs: Inputs, made: Mapping[str, Block], extra: Sequence[Block], params: StocksParams
 ) -> tuple[list[Block], list[dict[str, Any]]]:
-    """Return consumption at current prices and the stocks at year-end replacement cost."""
+    """Return flows at current prices, the stocks at year-end replacement cost, and what prices alone add to them."""
     price = inputs.get(BlockKey("investment_price", CHOSEN, "index"))
     year_end = inputs.get(BlockKey("investment_price", "year_end", "year_end"))
     if price is None or year_end is None:
@@ -765,7 +841,85 @@ def _valued(
                 part=block.part,
             )
         )
+    changes = BlockKey("other_volume_changes", "of_vintages", "constant")
+    for block in extra:
+        if block.key == changes:
+            edges = price_edges(block.series, price, params.deflation_order.value)
+            out.append(
+                derive(
+                    AT_CURRENT_PRICES,
+                    changes._replace(price_basis="current"),
+                    block.series,
+                    block.periods,
+                    {"volume": given(block), "price": by_edges(price, edges)},
+                    sets=((params.deflation_order,),),
+                    part=block.part,
+                )
+            )
+    net = made["net_stock"]
+    edges = price_edges(net.series, price, params.deflation_order.value)
+    out.append(
+        derive(
+            HOLDING_GAINS,
+            BlockKey("holding_gains", "perpetual_inventory", "current"),
+            net.series,
+            net.periods,
+            {
+                "net_stock_previous": given(net),
+                "net_stock": given(net),
+                "price": by_edges(price, edges),
+                "year_end_price": by_edges(year_end, edges),
+                "year_end_price_previous": by_edges(year_end, edges),
+            },
+            sets=((params.deflation_order,),),
+            part=net.part,
+        )
+    )
     return out, []
+
+
+def _unbalanced_at_prices(inputs: Inputs, work: _Work, valued: Sequence[Block]) -> list[dict[str, Any]]:
+    """Test the account at current prices: opening + P (I - CFC + OVC) + HG = closing, from the stored figures."""
+    price = inputs.get(BlockKey("investment_price", CHOSEN, "index"))
+    by_key = {(b.key.measure, b.key.price_basis): b for b in valued}
+    closing = by_key.get(("net_stock", "year_end"))
+    if price is None or closing is None:
+        return []
+    series, periods = closing.series, closing.periods
+
+    def read(measure: str) -> F8:
+        block = by_key.get((measure, "current"))
+        return np.zeros(closing.value.shape) if block is None else read_values(given(block), series, periods)
+
+    edges = price_edges(series, price, work.params.deflation_order.value)
+    prices = read_values(replace(by_edges(price, edges), own=series.key), series, periods)
+    flow = read_values(work.begin.flow, series, periods) * prices
+    lost, gains = read("consumption_of_fixed_capital"), read("holding_gains")
+    other = np.nan_to_num(read("other_volume_changes"))
+    before = closing.value[:-1]
+    sides = (before, flow[1:], -lost[1:], other[1:], gains[1:], -closing.value[1:])
+    gap = np.sum(sides, axis=0)
+    with np.errstate(invalid="ignore"):
+        bad = np.abs(gap) > BALANCE_TOLERANCE * np.sum(np.abs(sides), axis=0)
+    out = []
+    for n in np.flatnonzero(bad.any(axis=0)):
+        t = int(np.argmax(bad[:, n])) + 1
+        out.append(
+            note(
+                "balance_current",
+                "stop",
+                "the account at current prices does not close: opening stock, investment, consumption, other changes "
+                "and holding gains do not give the closing stock",
+                series.table,
+                int(series.key[n]),
+                measure="net_stock",
+                time_period=str(periods[t]),
+                found=f"a gap of {-gap[t - 1, n]:.6g}",
+                expected="0",
+                remedy="report this: the arithmetic of the stock is wrong",
+            )
+        )
+    return out
 
 
 STAGE = Stage(
@@ -786,7 +940,11 @@ STAGE = Stage(
         "surviving_part/perpetual_inventory/_Z",
         "other_volume_changes/benchmark_gap/constant",
         "other_volume_changes/of_vintages/constant",
+        "other_volume_changes/of_vintages/current",
         "gross_volume_changes/of_vintages/constant",
+        "holding_gains/perpetual_inventory/current",
+        "vintage_ages/perpetual_inventory/constant",
+        "average_age/perpetual_inventory/constant",
         "benchmark_factor/capital_output_ratio/_Z",
         "trend_growth/declared_growth/_Z",
         "trend_investment/declared_growth/constant",

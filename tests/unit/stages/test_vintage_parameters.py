@@ -63,10 +63,10 @@ def test_a_rate_that_changes_for_all_that_is_alive(timing, half):
 
 
 def test_a_rate_for_later_vintages_leaves_the_older_ones():
-    book, _ = build(
-        {"N112": RATES}, {A: [NAN, *FLOW]}, initial_stock="backcast_growth", backcast_growth=0.0
-    )
-    old = [1000 * 0.9 ** (t + 1) + sum(FLOW[s] * 0.9 ** (t - s) for s in range(min(t + 1, 2))) for t in range(6)]
+    book, _ = build({"N112": RATES}, {A: [NAN, *FLOW]}, initial_stock="backcast_growth", backcast_growth=0.0)
+    old = [
+        1000 * 0.9 ** (t + 1) + sum(FLOW[s] * 0.9 ** (t - s) for s in range(min(t + 1, 2))) for t in range(6)
+    ]
     new = [sum(FLOW[s] * 0.7 ** (t - s) for s in range(2, t + 1)) for t in range(6)]
     np.testing.assert_allclose(_of(book, "net_stock"), np.add(old, new), rtol=1e-12)
 
