@@ -1,4 +1,4 @@
-"""Every starting stock and other volume changes, assembled from files: accounts close, and every figure is re-performed."""
+"""Every starting stock, other volume changes and years of parameters, assembled from files and re-performed."""
 
 from collections.abc import Iterator
 from pathlib import Path

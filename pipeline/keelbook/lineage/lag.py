@@ -67,8 +67,11 @@ class TableKernel:
 
         The opening stock is sum_v stock(v) I (1+g)^-(v+1) of vintages that grew at g (methods.md section 3),
         so after t periods its weight is sum_v w(v+t) (1+g)^-(v+1) / sum_v stock(v) (1+g)^-(v+1).
+        Weights that are all 0 (used up within the period) leave no opening stock, and 0 of it.
         """
         later = opening_vintages(self.table, growth, count)
+        if not np.any(self.stock):
+            return np.asarray(0 * later)
         return np.asarray(later / opening_stock_profile(np.ones_like(growth), growth, self.stock))
 
 

@@ -145,7 +145,7 @@ def backcast(window: int) -> Callable[..., Array]:
     """
 
     def f(investment: Array, indicator: Array, which: I4) -> Array:
-        T, M = investment.shape
+        T = len(investment)
         there = np.isfinite(investment)
         first = np.argmax(there, axis=0)
         rows = np.arange(T)[:, None]

@@ -158,7 +158,7 @@ HOLDING_GAINS = Formula(
 
 VINTAGE_AGES = Formula(
     name="net_stock_times_age",
-    equation="sum_v (v + a) w(v) I_(t-v) + the same of the opening stock, a the age of new investment at the year's end",
+    equation="sum_v (v + a) w(v) I_(t-v) + the same of the opening stock, a the age of new investment",
     citation="OECD, Measuring Capital (2009): the age of a stock is that of its vintages",
     roles=(Role("investment"), Role("opening_stock"), Role("growth", counted=False)),
     build=lambda s: Lag(tuple(aged_kernel(c, s.periods) for c in s.sets), s.which),
@@ -356,6 +356,7 @@ def _changed(
     begin, series, periods = work.begin, work.series, work.investment.periods
     hit = begin.rescaled.copy()
     blocks: list[Block] = []
+    findings: list[dict[str, Any]] = []
     benchmark = benchmarks.get("net_stock")
     even = None
     if begin.spread.any() and benchmark is not None:
@@ -383,6 +384,7 @@ def _changed(
                 chosen=False,
                 part=False,
             )
+            findings = [_no_even_change(even, int(n)) for n in np.flatnonzero(~even.held)]
             even = even.take(even.held)
             blocks.append(even)
             hit |= even.series.locate(series.key) >= 0
@@ -390,7 +392,7 @@ def _changed(
         at = changes.series.locate(series.key)
         hit |= (at >= 0) & np.nan_to_num(changes.value[:, np.maximum(at, 0)]).any(axis=0)
     if not hit.any():
-        return {}, blocks, []
+        return {}, blocks, findings
     taken = series.take(hit)
     none = nothing(work.investment, taken)
     target = none
@@ -469,11 +471,62 @@ def _changed(
                     part=work.investment.part[there],
                 )
             )
-    return out, blocks, _too_large(work, part, changes)
+    findings += _too_large(work, part, changes) + _before_benchmark(work, changes, benchmark)
+    return out, blocks, findings
 
 
 CHANGE_OF = {"net_stock": "other_volume_changes", "gross_stock": "gross_volume_changes"}
 """Stock -> the measure of its other changes in volume."""
+
+
+def _no_even_change(even: Block, n: int) -> dict[str, Any]:
+    return note(
+        "no_even_change",
+        "warn",
+        "the gap between two benchmarks cannot be spread: in some year an even change takes more than there is, or a "
+        "figure of investment is missing; the later benchmark is not met",
+        even.series.table,
+        int(even.series.key[n]),
+        measure="net_stock",
+        expected="two benchmarks from the start of the stock on, and a gap smaller than the stock between them",
+        remedy="check both benchmarks, or choose another initial_stock",
+    )
+
+
+def _before_benchmark(work: _Work, changes: Block | None, benchmark: Block | None) -> list[dict[str, Any]]:
+    """Return a finding per series whose first benchmark of the net stock comes after a change: it is missed by that."""
+    if changes is None or benchmark is None:
+        return []
+    series = work.series
+    known = read_values(given(benchmark), series, work.investment.periods)
+    change = np.nan_to_num(read_values(given(changes), series, work.investment.periods))
+    opening = np.isfinite(work.begin.opening_values("net_stock", series))
+    rows = np.arange(len(change))[:, None]
+    first, opens = np.argmax(np.isfinite(known), axis=0), np.argmax(opening, axis=0)
+    early = (change != 0) & (rows > opens) & (rows <= first)
+    scaled = {b.key.method: b.series for b in work.begin.blocks if b.key.measure == "benchmark_factor"}
+    by_benchmark = scaled.get("benchmark")
+    out = []
+    for n in np.flatnonzero(early.any(axis=0) & ~work.begin.rescaled):
+        if by_benchmark is None or by_benchmark.locate(series.key[[n]])[0] < 0:
+            continue
+        t = int(np.argmax(early[:, n]))
+        out.append(
+            note(
+                "change_before_benchmark",
+                "warn",
+                "an other change in volume comes before the benchmark that sets the starting stock; what is left of "
+                "the change is then missing at the benchmark",
+                series.table,
+                int(series.key[n]),
+                measure="other_volume_changes",
+                time_period=str(work.investment.periods[t]),
+                found=f"{change[t, n]:.6g}",
+                expected=f"no change up to the benchmark of {work.investment.periods[int(first[n])]}",
+                remedy="leave the change out (the benchmark already shows it), or choose another initial_stock",
+            )
+        )
+    return out
 
 
 def _edges(source: Given) -> Edges:
@@ -677,7 +730,8 @@ def _choices(
                     "measure": "net_stock",
                     "asset": codes["asset"][a],
                     "industry": codes["industry"][j],
-                    "message": "no row of rules/assets.csv covers this asset; its stocks are not computed, and missing from totals",
+                    "message": "no row of rules/assets.csv covers this asset; its stocks are not computed, and missing "
+                    "from totals",
                     "expected": "a row for the asset, or for a group that it belongs to",
                     "remedy": "add a row to rules/assets.csv of the assembly",
                 }

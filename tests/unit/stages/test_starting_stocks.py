@@ -213,3 +213,14 @@ def test_the_gap_is_met_with_a_finite_life_too():
     assert _net(book)[[1, 3]] == pytest.approx([100, 130], rel=1e-12)
     spread = column(get(book, "other_volume_changes/benchmark_gap/constant"), A)
     assert spread[2] == spread[3] != 0
+
+
+def test_a_gap_that_is_more_than_what_stands_between_is_told():
+    """Life 3 and nothing invested in 2013: what stands then is less than an even loss."""
+    flow = {A: [NAN, 60.0, 60, 0, 0, 600]}
+    given = block(BENCHMARK, {A: [NAN, 100.0, NAN, NAN, NAN, 400.0]}, chosen=False)
+    book, findings = build({"N112": HYPERBOLIC}, flow, given, initial_stock="benchmarks_spread")
+    assert rules_of(findings) == ["no_even_change"]
+    assert findings[0]["industry"] == "A"
+    assert _net(book)[1] == pytest.approx(100, rel=1e-12)
+    assert np.isfinite(_net(book)[1:]).all()

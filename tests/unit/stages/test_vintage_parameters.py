@@ -24,7 +24,7 @@ def test_a_life_that_is_shorter_for_later_vintages():
     start = {"initial_stock": "backcast_growth", "backcast_growth": 0.0}
     book, findings = build({"N112": LIVES}, {A: [NAN, *FLOW]}, **start)
     assert not findings
-    flow = {t: x for t, x in zip(range(-3, 6), [100.0] * 3 + FLOW, strict=True)}
+    flow = dict(zip(range(-3, 6), [100.0] * 3 + FLOW, strict=True))
 
     def stock(t, of):
         return sum(x * of(s)[t - s] for s, x in flow.items() if 0 <= t - s < len(of(s)))

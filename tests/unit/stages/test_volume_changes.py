@@ -15,6 +15,10 @@ LOST = {"consumption_of_fixed_capital": Z, "retirements": [1, 1, 1, 0]}
 FLOW, CHANGE = [60.0, 60, 90, 30, 60, 75], [0.0, -40, 0, 25, 0, 0]
 
 
+def _standing(vintages: dict[int, float], w: list[float], t: int) -> float:
+    return sum(i * w[t - s] for s, i in vintages.items() if t - s < 4)
+
+
 def _by_loops() -> dict[str, list[float]]:
     """Return every stock and loss: vintages 60 each before the first year, cut by what each change leaves."""
     vintages = {-3: 60.0, -2: 60.0, -1: 60.0}
@@ -25,15 +29,12 @@ def _by_loops() -> dict[str, list[float]]:
             out[name].append(lost + flow * (1 - w[0]))
         vintages[t] = flow
 
-        def standing(w: list[float], t: int = t) -> float:
-            return sum(i * w[t - s] for s, i in vintages.items() if t - s < 4)
-
-        before = standing(WEIGHTS["gross_stock"])
-        left = 1 + CHANGE[t] / standing(Z)
+        before = _standing(vintages, WEIGHTS["gross_stock"], t)
+        left = 1 + CHANGE[t] / _standing(vintages, Z, t)
         vintages = {s: i * left for s, i in vintages.items()}
-        out["gross_change"].append(standing(WEIGHTS["gross_stock"]) - before)
+        out["gross_change"].append(_standing(vintages, WEIGHTS["gross_stock"], t) - before)
         for name, w in WEIGHTS.items():
-            out[name].append(standing(w))
+            out[name].append(_standing(vintages, w, t))
     return out
 
 
@@ -101,7 +102,7 @@ def test_a_loss_of_all_there_is_or_more_stops_the_run(change):
 
 def test_a_change_of_a_stock_that_is_not_built_is_told():
     rows = {A: [NAN, 100.0, 100, 100]}
-    book, findings = build(
+    _, findings = build(
         {"N112": GEOMETRIC}, rows, block(CHANGES, {"industry=C asset=N112": [NAN, NAN, -4.0, NAN]})
     )
     assert rules_of(findings) == ["change_without_stock"]
@@ -121,3 +122,17 @@ def test_a_change_that_the_stock_does_not_show_stops_the_run(monkeypatch):
         {"N112": GEOMETRIC}, {A: [NAN, 100.0, 100, 100]}, block(CHANGES, {A: [NAN, NAN, -400.0, NAN]})
     )
     assert [(f["rule"], f["time_period"]) for f in findings] == [("balance", "2012")]
+
+
+@pytest.mark.parametrize(("year", "told"), [(2, True), (3, False)])
+def test_a_change_before_the_benchmark_that_sets_the_start_is_told(year, told):
+    change, known = [NAN] * 5, [NAN, NAN, 900.0, NAN, NAN]
+    change[year] = -50.0
+    _, findings = build(
+        {"N112": GEOMETRIC},
+        {A: [NAN, 100.0, 100, 100, 100]},
+        block(CHANGES, {A: change}),
+        block("net_stock/delivered/constant", {A: known}, chosen=False),
+        initial_stock="benchmark",
+    )
+    assert rules_of(findings) == (["change_before_benchmark"] if told else [])
