@@ -229,6 +229,16 @@ TAXES = tuple(
     for rate in (0.2, 0.35)
 )
 
+TAXES = tuple(
+    {
+        "services.tax_rate": rate,
+        "services.tax_allowances": 0.8,
+        "services.tax_credit": 0.05,
+        "services.property_tax": rate / 10,
+    }
+    for rate in (0.2, 0.35)
+)
+
 UNITS = ({"source.unit_mult": 3, "measure.unit_mult": 6}, {"source.unit_mult": 0, "measure.unit_mult": 0})
 
 
