@@ -22,6 +22,7 @@ from keelbook.stages.shares import SharesParams
 from keelbook.stages.starting_stock import StartParams
 from keelbook.stages.stocks import StocksParams
 from keelbook.stages.totals import Grouping
+from keelbook.stages.valuation import ValuationParams
 
 MEASURES_FILE = "keelbook/schemas/measures.toml"
 
@@ -101,6 +102,9 @@ def stage_params(assembly: Assembly, parameters: Parameters) -> Mapping[str, Any
                 choice("capital", "assumed_limit"),
             ),
             order,
+        ),
+        "valuation": ValuationParams(
+            choice("valuation", "price_bases"), choice("valuation", "chaining"), order, reference_year
         ),
         "labour": LabourParams(
             reference_year,

@@ -5,7 +5,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from keelbook.blocks import B1, F8, I4, I8, Block, BlockKey, Choice, Edges, MethodSet, SeriesIndex
+from keelbook.blocks import B1, F8, I4, Block, BlockKey, Choice, Edges, MethodSet, SeriesIndex
 from keelbook.lineage.derive import Given, derive, given
 from keelbook.lineage.formula import Formula, Role, Setting
 from keelbook.lineage.primitives import Each, Either, Span, Spans
@@ -335,12 +335,21 @@ def _made(
 
 
 def opening_depreciations(
-    net: Block, consumption: Block, investment: Block, prices: Prices, params: CostParams
+    net: Block,
+    consumption: Block,
+    before_changes: Block | None,
+    investment: Block,
+    prices: Prices,
+    params: CostParams,
 ) -> Block:
-    """Return what the opening vintages of every series with consumption lose, at year-end prices."""
+    """Return what the opening vintages of every series with consumption lose, at year-end prices.
+
+    before_changes: consumption of the same vintages before other changes in volume, where there were any: it was
+    made with the parameters of the asset, from which w(0) follows.
+    """
     at = consumption.series.locate(net.series.key)
     series = net.series.take(at >= 0)
-    sets, which = _sets_of(consumption, at[at >= 0])
+    sets, which = _sets_of(series, consumption, before_changes)
     assert prices.year_end.edges is not None
     edges = prices.year_end.edges
     mine = Edges(edges.blocks, edges.which[at >= 0], edges.key[at >= 0])
@@ -360,10 +369,18 @@ def opening_depreciations(
     )
 
 
-def _sets_of(block: Block, at: I8) -> tuple[list[MethodSet], I4]:
-    """Return the parameter sets that some series of a block were made with, and which of them each uses."""
-    used, which = np.unique(block.origin.set[at], return_inverse=True)
-    return [block.origin.sets[i] for i in used], which.astype(np.int32)
+def _sets_of(
+    series: SeriesIndex, consumption: Block, before_changes: Block | None
+) -> tuple[list[MethodSet], I4]:
+    """Return the asset parameters of each series: those its consumption, or its part before changes, was made with."""
+    found: dict[MethodSet, int] = {}
+    which = np.empty(len(series), np.int32)
+    blocks = [consumption] if before_changes is None else [before_changes, consumption]
+    places = [block.series.locate(series.key) for block in blocks]
+    for n in range(len(series)):
+        block, at = next((b, place[n]) for b, place in zip(blocks, places, strict=True) if place[n] >= 0)
+        which[n] = found.setdefault(block.origin.sets[block.origin.set[at]], len(found))
+    return list(found), which
 
 
 @dataclass(frozen=True)

@@ -32,6 +32,7 @@ NET = BlockKey("net_stock", CHOSEN, "constant")
 PRODUCTIVE = BlockKey("productive_stock", CHOSEN, "constant")
 CONSUMPTION = BlockKey("consumption_of_fixed_capital", "perpetual_inventory", "current")
 CONSUMPTION_VOLUME = BlockKey("consumption_of_fixed_capital", "perpetual_inventory", "constant")
+CONSUMPTION_BEFORE = BlockKey("consumption_of_fixed_capital", "before_changes", "constant")
 INVESTMENT_VOLUME = BlockKey("investment", CHOSEN, "constant")
 PRICE = BlockKey("investment_price", CHOSEN, "index")
 YEAR_END = BlockKey("investment_price", "year_end", "year_end")
@@ -293,7 +294,9 @@ def _assets(
     wear, blocks = whole[CONSUMPTION], [base, *totals(base, DIMENSIONS)]
     if params.user_cost_form.value == "opening":
         volume = whole[CONSUMPTION_VOLUME].take(whole[CONSUMPTION_VOLUME].part)
-        lost = asset_costs.opening_depreciations(net, volume, whole[INVESTMENT_VOLUME], prices, params)
+        before = inputs.get(CONSUMPTION_BEFORE)
+        flow = whole[INVESTMENT_VOLUME]
+        lost = asset_costs.opening_depreciations(net, volume, before, flow, prices, params)
         made = [lost, *totals(lost, DIMENSIONS)]
         wear = merge(made)
         blocks += made
@@ -814,6 +817,7 @@ STAGE = Stage(
             PRODUCTIVE,
             CONSUMPTION,
             CONSUMPTION_VOLUME,
+            CONSUMPTION_BEFORE,
             INVESTMENT_VOLUME,
             PRICE,
             YEAR_END,
