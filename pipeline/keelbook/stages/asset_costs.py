@@ -94,18 +94,35 @@ SMOOTHED_REVALUATION = Formula(
 )
 
 
-def _opening_depreciation(s: Setting) -> Each:
-    lost = lag("consumption_of_fixed_capital")(s).kernels
-    kept = np.array([1 - kernel.weights(1)[0] for kernel in lost])[s.which]
-    return Each(opening_depreciation, (kept,))
+def _new_loss(s: Setting) -> Span:
+    """1 - w(0) times investment of the period, with the weights that hold in it."""
+    kernels = lag("consumption_of_fixed_capital")(s).kernels
+    lost = np.array([[kernel.at(row, 1)[0] for kernel in kernels] for row in range(len(s.periods))])[
+        :, s.which
+    ]
 
+    def plan(x: F8) -> Spans:
+        rows = np.broadcast_to(np.arange(len(x))[:, None], x.shape)
+        return Spans(np.where(np.isfinite(x), rows, -1), np.ones(x.shape, np.int64), lost[None])
+
+    return Span(plan)
+
+
+NEW_LOSS = Formula(
+    name="loss_of_new_investment",
+    equation="loss of new investment_t = (1 - w(0)) I_t",
+    citation=f"{CAPITAL_MANUAL}: what investment of the period loses in it",
+    roles=(Role("investment"),),
+    build=_new_loss,
+    kind="series",
+)
 
 OPENING_DEPRECIATION = Formula(
     name="depreciation_of_opening_vintages",
     equation="D_t = Pe_t (CFC_t - (1 - w(0)) I_t)",
     citation=f"{CAPITAL_MANUAL}: what the opening stock loses over the period, at year-end prices",
-    roles=(Role("year_end_price"), Role("consumption"), Role("investment")),
-    build=_opening_depreciation,
+    roles=(Role("year_end_price"), Role("consumption"), Role("loss_of_new_investment")),
+    build=lambda s: Each(lambda price, loss, new: opening_depreciation(price, loss, new, np.zeros(()))),
 )
 
 
@@ -227,6 +244,7 @@ FORMULAS = (
     OPENING_REVALUATION,
     PRICE_CHANGE,
     SMOOTHED_REVALUATION,
+    NEW_LOSS,
     OPENING_DEPRECIATION,
     DECLARED_TAX_TERM,
     TAX_TERM,
@@ -341,32 +359,40 @@ def opening_depreciations(
     investment: Block,
     prices: Prices,
     params: CostParams,
-) -> Block:
-    """Return what the opening vintages of every series with consumption lose, at year-end prices.
+) -> tuple[Block, Block]:
+    """Return what new investment loses, and what the opening vintages lose at year-end prices.
 
     before_changes: consumption of the same vintages before other changes in volume, where there were any: it was
     made with the parameters of the asset, from which w(0) follows.
     """
-    at = consumption.series.locate(net.series.key)
-    series = net.series.take(at >= 0)
+    there = consumption.series.locate(net.series.key) >= 0
+    series = net.series.take(there)
     sets, which = _sets_of(series, consumption, before_changes)
-    assert prices.year_end.edges is not None
-    edges = prices.year_end.edges
-    mine = Edges(edges.blocks, edges.which[at >= 0], edges.key[at >= 0])
-    return derive(
+    new = derive(
+        NEW_LOSS,
+        BlockKey("consumption_of_fixed_capital", "new_investment", "constant"),
+        series,
+        net.periods,
+        {"investment": given(investment)},
+        sets=sets,
+        which=which,
+        chosen=False,
+        part=False,
+    )
+    lost = derive(
         OPENING_DEPRECIATION,
         BlockKey("consumption_of_fixed_capital", "opening_vintages", "year_end"),
         series,
         net.periods,
         {
-            "year_end_price": Given((prices.year_end_block,), edges=mine),
+            "year_end_price": part_of(prices.year_end, there),
             "consumption": given(consumption),
-            "investment": given(investment),
+            "loss_of_new_investment": given(new),
         },
-        sets=[(*one, params.user_cost_form) for one in sets],
-        which=which,
-        part=net.part[at >= 0],
+        sets=((params.user_cost_form, params.deflation_order),),
+        part=net.part[there],
     )
+    return new, lost
 
 
 def _sets_of(

@@ -296,10 +296,10 @@ def _assets(
         volume = whole[CONSUMPTION_VOLUME].take(whole[CONSUMPTION_VOLUME].part)
         before = inputs.get(CONSUMPTION_BEFORE)
         flow = whole[INVESTMENT_VOLUME]
-        lost = asset_costs.opening_depreciations(net, volume, before, flow, prices, params)
+        new, lost = asset_costs.opening_depreciations(net, volume, before, flow, prices, params)
         made = [lost, *totals(lost, DIMENSIONS)]
         wear = merge(made)
-        blocks += made
+        blocks += [new, *made]
     actual = asset_costs.actual_gains(net, base, prices, params)
     smoothed = None
     if "smoothed" in (params.holding_gains.value, params.negative_user_cost.value):
@@ -832,6 +832,7 @@ STAGE = Stage(
         *(f"revaluation/{form}/current" for form in ("actual", "smoothed", OF_ALL)),
         "price_change/smoothed/_Z",
         "consumption_of_fixed_capital/opening_vintages/year_end",
+        "consumption_of_fixed_capital/new_investment/constant",
         *(f"tax_term/{form}/_Z" for form in ("of_rates", "declared")),
         "property_tax_rate/declared/_Z",
         *(f"{measure}/after_tax/current" for measure in ("taxed_base", "cost_before_return")),

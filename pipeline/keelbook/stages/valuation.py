@@ -424,7 +424,11 @@ def _historic(
         blocks += [flow, opening, held]
     found = Book(blocks).get(BlockKey(measure, "perpetual_inventory", "historic"))
     blocks += [] if found is None else totals(found, DIMENSIONS)
-    return blocks, _left_out(measure, stock.take(~done))
+    whole = inputs.get(BlockKey(measure, CHOSEN, "constant"))
+    if whole is None:
+        return blocks, []
+    parts = whole.take(whole.part)
+    return blocks, _left_out(measure, parts.take(stock.series.take(done).locate(parts.series.key) < 0))
 
 
 def _again(inputs: Inputs, block: Block, role: str) -> Given:
@@ -449,8 +453,8 @@ def _left_out(measure: str, stock: Block) -> list[dict[str, Any]]:
         note(
             "no_historic_cost",
             "note",
-            f"{len(stock.series)} stocks have no value at historic cost: they have no price, start from zero, or "
-            "other changes in volume hit their vintages",
+            f"{len(stock.series)} stocks have no value at historic cost and are missing from its totals: they were "
+            "delivered, have no price, start from zero, or other changes in volume hit their vintages",
             stock.series.table,
             int(stock.series.key[0]),
             measure=measure,

@@ -177,3 +177,16 @@ def test_historic_cost_keeps_the_price_of_each_vintage():
         historic[later], kept * historic[later - 1] + new * flow[later] * price[later], rtol=1e-9
     )
     assert (historic[later] < price[later] * volume[later]).all()
+
+
+def test_a_delivered_stock_has_no_historic_cost_and_it_is_told():
+    first = REFERENCE_YEAR - 7
+    flow = block("investment/deflated/constant", LONG_FLOWS, first=first)
+    price = block("investment_price/rebased/index", {"asset=_T": [1.0] * LONG}, first=first)
+    year_end = block(
+        "investment_price/year_end/year_end", {"asset=_T": [1.0] * LONG}, first=first, part=False
+    )
+    land = block("net_stock/delivered/constant", {"industry=A asset=N11": [5.0] * LONG}, first=first)
+    made, _ = run_stage(stocks.STAGE, params("stocks"), flow, price, year_end, land)
+    _, findings = run_stage(valuation.STAGE, params("valuation", chaining="none"), *made, flow, price, land)
+    assert [(f["rule"], f["asset"]) for f in findings] == [("no_historic_cost", "N11")]
