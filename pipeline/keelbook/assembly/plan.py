@@ -10,7 +10,7 @@ from keelbook.blocks import Choice, CodeTable, MethodSet
 from keelbook.contracts.assets import AssetRules, load_asset_rules
 from keelbook.contracts.loader import parse_toml
 from keelbook.contracts.measures import load_measures
-from keelbook.contracts.parameters import Parameter, Parameters
+from keelbook.contracts.parameters import Parameter, Parameters, declared_parameters
 from keelbook.locate import folder
 from keelbook.stages.decomposition import DecompositionParams
 from keelbook.stages.deflation import DeflationParams
@@ -22,6 +22,7 @@ from keelbook.stages.shares import SharesParams
 from keelbook.stages.starting_stock import StartParams
 from keelbook.stages.stocks import StocksParams
 from keelbook.stages.totals import Grouping
+from keelbook.stages.valuation import ValuationParams
 
 MEASURES_FILE = "keelbook/schemas/measures.toml"
 
@@ -91,8 +92,19 @@ def stage_params(assembly: Assembly, parameters: Parameters) -> Mapping[str, Any
             asset_sets(load_asset_rules(assembly.folder, assembly.lists)),
             choice("capital", "timing"),
             choice("capital", "age_price_mode"),
-            StartParams(choice("capital", "initial_stock"), choice("capital", "trend_window")),
+            StartParams(
+                choice("capital", "initial_stock"),
+                choice("capital", "trend_window"),
+                choice("capital", "backcast_growth"),
+                choice("capital", "link_window"),
+                choice("capital", "warm_up_limit"),
+                choice("capital", "negative_factor"),
+                choice("capital", "assumed_limit"),
+            ),
             order,
+        ),
+        "valuation": ValuationParams(
+            choice("valuation", "price_bases"), choice("valuation", "chaining"), order, reference_year
         ),
         "labour": LabourParams(
             reference_year,
@@ -106,14 +118,9 @@ def stage_params(assembly: Assembly, parameters: Parameters) -> Mapping[str, Any
             choice("income", "relative_earnings"),
         ),
         "services": ServicesParams(
-            choice("services", "rate_of_return"),
-            choice("services", "rate_scope"),
-            choice("services", "exogenous_sectors"),
-            choice("services", "real_rate"),
-            choice("services", "holding_gains"),
-            choice("services", "productive_stock_timing"),
-            order,
-            reference_year,
+            deflation_order=order,
+            reference_year=reference_year,
+            **{name: choice("services", name) for name in declared_parameters()["services"]},
         ),
         "shares": SharesParams(choice("shares", "smoothing_years")),
         "decomposition": DecompositionParams(

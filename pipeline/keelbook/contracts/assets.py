@@ -1,7 +1,7 @@
 """What each asset is like: `rules/assets.csv`, and the published tables its rows are taken from."""
 
 from collections.abc import Iterable, Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from functools import lru_cache
 from pathlib import Path
 from typing import Literal
@@ -22,8 +22,19 @@ REFERENCE_TABLES = ("bea_1997", "bea_structures", "bea_intellectual_property")
 
 Efficiency = Literal["cohort_geometric", "geometric", "hyperbolic", "linear", "constant"]
 AgePrice = Literal["straight_line", "declining_balance"]
+InitialStock = Literal[
+    "steady_state",
+    "backcast_growth",
+    "backcast_indicator",
+    "capital_output_ratio",
+    "zero",
+    "benchmark",
+    "benchmarks_spread",
+    "two_benchmarks",
+]
 
 _NUMBERS = ("rate", "life", "declining_balance_rate", "gross_life", "b", "discount_rate")
+_START = ("initial_stock", "initial_growth", "capital_output_ratio")
 _NEEDS: Mapping[str, tuple[str, ...]] = {
     "cohort_geometric": (),
     "geometric": ("rate", "life", "retirement", "discount_rate"),
@@ -48,6 +59,8 @@ class AssetRow(Declared):
 
     asset: str
     industry: str
+    first_year: int | None = Field(None, ge=1800, le=2200)
+    applies_to: Literal["vintages", "stock"] | None = None
     efficiency: Efficiency | None = None
     age_price: AgePrice | None = None
     rate: float | None = Field(None, gt=0, le=1)
@@ -57,6 +70,9 @@ class AssetRow(Declared):
     b: float | None = Field(None, le=1)
     retirement: str | None = None
     discount_rate: float | None = Field(None, gt=-1)
+    initial_stock: InitialStock | None = None
+    initial_growth: float | None = Field(None, gt=-1)
+    capital_output_ratio: float | None = Field(None, gt=0)
     citation: str
     status: Mark
     line: int
@@ -124,6 +140,7 @@ class AssetRow(Declared):
                         remedy=f"give {name}, or choose another form",
                     )
                 )
+        found += self._start_faults()
         if cohort:
             found += self._cohort_faults()
         elif not found and (patterns := (info.context or {})["patterns"]) is not None:
@@ -131,6 +148,45 @@ class AssetRow(Declared):
         if found:
             raise faults(found)
         return self
+
+    def _start_faults(self) -> list[PydanticCustomError]:
+        """A number that the declared starting stock does not use, or lacks, or that leads nowhere."""
+        found = []
+        for name, method in (
+            ("initial_growth", "backcast_growth"),
+            ("capital_output_ratio", "capital_output_ratio"),
+        ):
+            if getattr(self, name) is not None and self.initial_stock not in (None, method):
+                found.append(
+                    fault(
+                        f"'{name}' contradicts initial_stock {self.initial_stock}",
+                        at=(name,),
+                        found=f"{name} {getattr(self, name):g}",
+                        expected=f"an empty cell, or initial_stock {method}",
+                        remedy="correct one of the two",
+                    )
+                )
+        if self.initial_stock == "capital_output_ratio" and self.capital_output_ratio is None:
+            found.append(
+                fault(
+                    "initial_stock capital_output_ratio without the ratio",
+                    found="an empty cell",
+                    expected="capital_output_ratio: net stock over value added, at the same prices",
+                    remedy="give capital_output_ratio",
+                )
+            )
+        rate = self.rate if self.efficiency == "cohort_geometric" else None
+        if rate is not None and self.initial_growth is not None and rate + self.initial_growth <= 0:
+            found.append(
+                fault(
+                    "growth plus depreciation is not above 0: no past has that stock",
+                    at=("initial_growth",),
+                    found=f"initial_growth {self.initial_growth:g}, rate {rate:g}",
+                    expected=f"initial_growth above {-rate:g}",
+                    remedy="correct one of the two",
+                )
+            )
+        return found
 
     def _without_weights(self, pattern: RetirementPattern) -> list[PydanticCustomError]:
         """Some values are possible each, but not together: the arithmetic itself says so, whatever the timing."""
@@ -267,18 +323,37 @@ class AssetRule:
     b: float | None
     retirement: str | None
     discount_rate: float | None
+    initial_stock: InitialStock | None
+    initial_growth: float | None
+    capital_output_ratio: float | None
     citation: str
     status: Mark
     file: str
     line: int
     pattern: RetirementPattern | None
+    first_year: int | None = None
+    applies_to: str | None = None
+    later: tuple["AssetRule", ...] = ()
 
     def parameters(self) -> list[Parameter]:
-        """Return what a stock under this rule rests on, for the record: `asset.life`, `asset.retirement.sd`, ..."""
+        """Return what a stock under this rule rests on, for the record: `asset.life`, `asset.retirement.sd`, ...
+
+        What holds from a later year on has that year in its name: `asset.life@1990`.
+        """
+        out = self._own_parameters()
+        if self.later and self.later[0].applies_to == "stock":
+            first = self.later[0]
+            cited = f"{first.citation} [{first.status}]"
+            out.append(Parameter("asset.applies_to", "stock", first.file, first.line, cited))
+        for rule in self.later:
+            out += [replace(p, name=f"{p.name}@{rule.first_year}") for p in rule._own_parameters()]
+        return out
+
+    def _own_parameters(self) -> list[Parameter]:
         cited = f"{self.citation} [{self.status}]"
         out = [
             Parameter(f"asset.{name}", getattr(self, name), self.file, self.line, cited)
-            for name in ("efficiency", "age_price", *_NUMBERS, "retirement")
+            for name in ("efficiency", "age_price", *_NUMBERS, "retirement", *_START)
             if getattr(self, name) is not None
         ]
         if self.pattern is not None:
@@ -362,7 +437,7 @@ def _read(
     """Return the rules of a file. Without `patterns` (theirs is a faulty file) no retirement is looked up."""
     rules = []
     context = {"lists": lists, "patterns": patterns}
-    for row in load_csv_rows(path, AssetRow, key=("asset", "industry"), context=context):
+    for row in load_csv_rows(path, AssetRow, key=("asset", "industry", "first_year"), context=context):
         given = row.model_dump()
         if (
             row.efficiency == "cohort_geometric"
@@ -374,7 +449,78 @@ def _read(
             given["life"] = None
         pattern = patterns[row.retirement] if patterns and row.retirement else None
         rules.append(AssetRule(file=label, pattern=pattern, **given))
-    return rules
+    return _in_time(rules, path)
+
+
+def _in_time(rules: list[AssetRule], path: Path) -> list[AssetRule]:
+    """Return one rule for each asset and industry, those that hold from a later year on in it.
+
+    Raises:
+        DeclarationError: rows of one asset and industry do not go together.
+    """
+    by_key: dict[tuple[str, str], list[AssetRule]] = {}
+    for rule in rules:
+        by_key.setdefault((rule.asset, rule.industry), []).append(rule)
+    problems, out = [], []
+    for (asset, industry), rows in by_key.items():
+        first = [rule for rule in rows if rule.first_year is None]
+        later = sorted(
+            (rule for rule in rows if rule.first_year is not None), key=lambda r: r.first_year or 0
+        )
+        problems += _faults_in_time(first, later, path, f"{asset}, {industry}")
+        if first:
+            out.append(replace(first[0], later=tuple(later)))
+    if problems:
+        raise DeclarationError(problems)
+    return out
+
+
+def _faults_in_time(first: list[AssetRule], later: list[AssetRule], path: Path, which: str) -> list[Problem]:
+    found = []
+
+    def wrong(rule: AssetRule, what: str, found_: str, expected: str, remedy: str) -> None:
+        found.append(Problem(f"{which}: {what}", str(path), f"line {rule.line}", found_, expected, remedy))
+
+    if later and not first:
+        wrong(
+            later[0],
+            "no row holds before the first year that is given",
+            f"first_year {later[0].first_year}",
+            "one row of this asset and industry without first_year",
+            "add the row that holds for earlier investment",
+        )
+    for rule in first:
+        if rule.applies_to is not None:
+            wrong(rule, "applies_to without first_year", rule.applies_to, "an empty cell", "give first_year")
+    if len({rule.applies_to or "vintages" for rule in later}) > 1:
+        wrong(
+            later[-1],
+            "some rows apply to vintages and some to the stock",
+            ", ".join(rule.applies_to or "vintages" for rule in later),
+            "the same in every row of an asset and industry",
+            "choose one",
+        )
+    for rule in (*first, *later):
+        by_rate = rule.efficiency == "cohort_geometric"
+        if any(r.applies_to == "stock" for r in later) and not by_rate:
+            wrong(
+                rule,
+                "a rate that changes for the whole stock needs a rate",
+                rule.efficiency or rule.age_price or "",
+                "cohort_geometric in every row of this asset and industry",
+                "leave applies_to empty: the row then holds for investment from its first_year on",
+            )
+    for rule in later:
+        for name in _START:
+            if getattr(rule, name) is not None:
+                wrong(
+                    rule,
+                    f"'{name}' in a row that holds from {rule.first_year} on",
+                    f"{getattr(rule, name)}",
+                    "an empty cell: the start belongs to the row without first_year",
+                    "move it to that row",
+                )
+    return found
 
 
 def _agrees(rate: float, declining_balance_rate: float, life: float) -> bool:

@@ -15,6 +15,7 @@ PriceBasis = Literal[
     "current",
     "constant",
     "previous_year",
+    "next_year",
     "year_end",
     "historic",
     "index",

@@ -68,7 +68,7 @@ class BenchmarkFactor:
         o, b, scaled, _, _ = self._solve(x)
         row, per = int(b[n]), float(scaled[n])
         yield Term(0, row, n, float(benchmark[row, n]), 1 / per, float(benchmark[row, n]) / per)
-        for v, w in enumerate(self.lag.kernels[self.lag.which[n]].weights(row - int(o[n]))):
+        for v, w in enumerate(self.lag.kernels[self.lag.which[n]].at(row, row - int(o[n]))):
             value = float(flow[row - v, n])
             yield Term(1, row - v, n, value, -float(w) / per, -float(w) * value / per)
 

@@ -32,7 +32,7 @@ from keelbook.blocks import (
     SeriesIndex,
 )
 from keelbook.lineage.formula import Formula, Role, Setting, values_of
-from keelbook.lineage.lag import Lag
+from keelbook.lineage.lag import Lag, WarmUp
 from keelbook.lineage.primitives import Either, Groups, Rule, Span
 
 
@@ -41,7 +41,8 @@ class Given:
     """The input of one role: a block read through a projection, or blocks read through edges per series.
 
     observation: the block holds observations, at their own frequency. at_reference: every period reads the
-    figure of that year, the reference year.
+    figure of that year, the reference year. own: keys of the series that the edges are for, in order, where they are
+    to be read for some of them.
     """
 
     blocks: tuple[Block, ...]
@@ -49,6 +50,7 @@ class Given:
     edges: Edges | None = None
     observation: bool = False
     at_reference: int | None = None
+    own: I8 | None = None
 
 
 def given(block: Block, **project: str) -> Given:
@@ -311,7 +313,7 @@ def _confidentiality(
         elif formula.kind == "series":
             if isinstance(rule, Span):
                 whole = np.maximum(whole, _reached(conf, rule, x[0]))
-            elif not isinstance(rule, Lag):
+            elif not isinstance(rule, Lag | WarmUp):
                 whole = np.broadcast_to(whole.max(axis=0), whole.shape)
             whole = np.maximum.accumulate(whole, axis=0)
         out = np.maximum(out, whole)

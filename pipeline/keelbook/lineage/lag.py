@@ -7,7 +7,7 @@ import numpy as np
 
 from keelbook.blocks import B1, F4, F8, I4, I8
 from keelbook.lineage.primitives import Parts, Term, _ratio
-from keelbook.methods.initial_stock import opening_stock_profile, opening_vintages
+from keelbook.methods.initial_stock import missing_part, opening_stock_profile, opening_vintages
 from keelbook.methods.perpetual_inventory import cohort_stock
 
 
@@ -29,7 +29,15 @@ class GeometricKernel:
         out[1:] = self.second * self.keep ** np.arange(max(count - 1, 0))
         return out
 
-    def remainder(self, growth: F8, count: int) -> F8:
+    def at(self, row: int, count: int) -> F8:
+        """Return the weights of the flows of a period and the ones before it."""
+        return self.weights(count)
+
+    def from_vintage(self, row: int, count: int) -> F8:
+        """Return the weights of the flow of a period in that period and later ones."""
+        return self.weights(count)
+
+    def remainder(self, growth: F8, count: int, opens: int = 0) -> F8:
         """Return the weight of the opening stock after 1..count periods, (count, N); growth cancels out."""
         ages = np.arange(count)[:, None]
         return self.second / self.of_opening * self.keep**ages * np.ones_like(growth)
@@ -48,17 +56,108 @@ class TableKernel:
         out[:n] = self.table[:n]
         return out
 
-    def remainder(self, growth: F8, count: int) -> F8:
+    def at(self, row: int, count: int) -> F8:
+        return self.weights(count)
+
+    def from_vintage(self, row: int, count: int) -> F8:
+        return self.weights(count)
+
+    def remainder(self, growth: F8, count: int, opens: int = 0) -> F8:
         """Return the weight of the opening stock after 1..count periods, (count, N).
 
         The opening stock is sum_v stock(v) I (1+g)^-(v+1) of vintages that grew at g (methods.md section 3),
         so after t periods its weight is sum_v w(v+t) (1+g)^-(v+1) / sum_v stock(v) (1+g)^-(v+1).
+        Weights that are all 0 (used up within the period) leave no opening stock, and 0 of it.
         """
         later = opening_vintages(self.table, growth, count)
+        if not np.any(self.stock):
+            return np.asarray(0 * later)
         return np.asarray(later / opening_stock_profile(np.ones_like(growth), growth, self.stock))
 
 
-Kernel = GeometricKernel | TableKernel
+@dataclass(frozen=True, eq=False)
+class BandKernel:
+    """Weights that differ between periods: band[t, s] of the flow of row s in row t, (T, T).
+
+    base: the kernel of the vintages in the opening stock. left[t, o]: the weight in row t of a stock that opens in
+    row o, where rates change for all that is alive; None where the opening follows `base`, whatever comes later.
+    """
+
+    band: F8
+    base: GeometricKernel | TableKernel
+    left: F8 | None = None
+
+    def at(self, row: int, count: int) -> F8:
+        return self.band[row, row - count + 1 : row + 1][::-1]
+
+    def from_vintage(self, row: int, count: int) -> F8:
+        return self.band[row : row + count, row]
+
+    def remainder(self, growth: F8, count: int, opens: int = 0) -> F8:
+        """Return the weight of the opening stock of row `opens` after 1..count periods, (count, N)."""
+        if self.left is None:
+            return self.base.remainder(growth, count)
+        return self.left[opens + 1 : opens + 1 + count, opens, None] * np.ones_like(growth)
+
+
+def of_vintages(kernels: Sequence[GeometricKernel | TableKernel], of_row: I8) -> BandKernel:
+    """Return the weights of flows of which row s has kernel of_row[s] for ever; the opening has that of row 0."""
+    T = len(of_row)
+    band = np.zeros((T, T))
+    for s in range(T):
+        band[s:, s] = kernels[of_row[s]].weights(T - s)
+    return BandKernel(band, kernels[of_row[0]])
+
+
+def of_periods(kernels: Sequence[GeometricKernel], of_row: I8, *, loss: bool) -> BandKernel:
+    """Return the weights where the rate of row t holds for all that is alive in it: W_t = k_t W_(t-1) + w_t(0) I_t.
+
+    kernels: of the stock. loss: the weights of what is lost, (1 - w_t(0)) I_t + (1 - k_t) W_(t-1), are returned.
+    """
+    T = len(of_row)
+    keep, first = (np.array([getattr(kernels[i], name) for i in of_row]) for name in ("keep", "first"))
+    band, left = np.zeros((T, T)), np.zeros((T, T))
+    for s in range(T):
+        kept = np.cumprod(keep[s + 1 :])
+        before = np.concatenate(([1.0], kept[:-1]))[: len(kept)]
+        later = (1 - keep[s + 1 :]) * before if loss else kept
+        band[s, s] = 1 - first[s] if loss else first[s]
+        band[s + 1 :, s] = first[s] * later
+        left[s + 1 :, s] = later
+    return BandKernel(band, kernels[of_row[0]], left)
+
+
+@dataclass(frozen=True, eq=False)
+class AgedKernel:
+    """The weights of a stock times the age of what is left: exact age `start` in the period of investment."""
+
+    of: GeometricKernel | TableKernel | BandKernel
+    start: float
+
+    def _ages(self, count: int) -> F8:
+        return np.asarray(np.arange(count) + self.start, np.float64)
+
+    def at(self, row: int, count: int) -> F8:
+        return np.asarray(self.of.at(row, count) * self._ages(count))
+
+    def from_vintage(self, row: int, count: int) -> F8:
+        return np.asarray(self.of.from_vintage(row, count) * self._ages(count))
+
+    def remainder(self, growth: F8, count: int, opens: int = 0) -> F8:
+        """Return the weight of the opening stock after 1..count periods, (count, N).
+
+        With q = (1 - d) / (1 + g) its vintages have the mean age start + q / (1 - q) when it opens, by geometric
+        weights, and so t more after t periods; by a table of weights each vintage counts with its own age.
+        """
+        base = self.of.base if isinstance(self.of, BandKernel) else self.of
+        if isinstance(base, TableKernel):
+            return TableKernel(base.table * self._ages(len(base.table)), base.stock).remainder(growth, count)
+        q = base.keep / (1 + growth)
+        ages = np.arange(1, count + 1)[:, None] + self.start + q / (1 - q)
+        return np.asarray(self.of.remainder(growth, count, opens) * ages)
+
+
+Kernel = GeometricKernel | TableKernel | BandKernel | AgedKernel
 
 
 @dataclass(frozen=True, eq=False)
@@ -155,10 +254,10 @@ class Lag:
         flow, opening, growth = (v[:, n : n + 1] for v in x)
         o = int(self._start(flow, opening)[0][0])
         kernel = self.kernels[self.which[n]]
-        for v, w in enumerate(kernel.weights(t - o)):
+        for v, w in enumerate(kernel.at(t, t - o)):
             value = float(flow[t - v, 0])
             yield Term(0, t - v, n, value, float(w), float(w) * value)
-        rest = float(kernel.remainder(growth[o], t - o)[-1, 0])
+        rest = float(kernel.remainder(growth[o], t - o, o)[-1, 0])
         value = float(opening[o, 0])
         yield Term(1, o, n, value, rest, rest * value)
         yield Term(2, o, n, float(growth[o, 0]), 0.0, 0.0)
@@ -167,11 +266,60 @@ class Lag:
         return float(np.sum([t.contribution for t in terms]))
 
 
-def _tabled(kernel: TableKernel, flow: F8, opening: F8, growth: F8, o: I8) -> F8:
+@dataclass(frozen=True, eq=False)
+class WarmUp:
+    """`own` from a stock of zero, masked until the stock lacks at most a part `limit` of what it would be.
+
+    Arguments: flow, and the opening stock that is left out with its growth, as `Lag` takes them. The part is
+    K_ss / (K + K_ss), K the stock from zero and K_ss what is left of the opening that was not entered; from the
+    first period in which it is at most the limit, all are kept. Source: methods.md section 3.
+    """
+
+    own: Lag
+    stock: Lag
+    limit: float
+
+    def _kept(self, flow: F8, left_out: F8, growth: F8) -> B1:
+        missing = self.stock.compute(np.where(np.isfinite(flow), 0.0, np.nan), left_out, growth)
+        held = self.stock.compute(flow, 0 * left_out, growth)
+        with np.errstate(invalid="ignore", divide="ignore"):
+            part = missing_part(missing, held)
+        return np.logical_or.accumulate((part >= 0) & (part <= self.limit), axis=0)
+
+    def compute(self, *x: F8) -> F8:
+        flow, left_out, growth = x
+        return np.where(self._kept(*x), self.own.compute(flow, 0 * left_out, growth), np.nan)
+
+    def mix(self, x: Sequence[F8], y: F8, kinds: Sequence[Parts]) -> list[F4 | None]:
+        flow, left_out, growth = x
+        from_zero = (flow, 0 * left_out, growth)
+        return self.own.mix(from_zero, self.own.compute(*from_zero), kinds)
+
+    def terms(self, x: Sequence[F8], at: tuple[int, int]) -> Iterator[Term]:
+        flow, left_out, growth = x
+        for term in self.own.terms((flow, 0 * left_out, growth), at):
+            if term.role == 1:
+                value = float(left_out[term.row, term.column])
+                yield Term(1, term.row, term.column, value, 0.0, 0.0)
+            else:
+                yield term
+
+    def combine(self, x: Sequence[F8], terms: Sequence[Term]) -> float:
+        return self.own.combine(x, terms)
+
+
+def _tabled(kernel: TableKernel | BandKernel | AgedKernel, flow: F8, opening: F8, growth: F8, o: I8) -> F8:
     """Return the sums of series that share one table of weights."""
-    y = cohort_stock(np.ascontiguousarray(flow), kernel.weights(min(len(flow), len(kernel.table))))
+    if isinstance(kernel, TableKernel):
+        y = cohort_stock(np.ascontiguousarray(flow), kernel.weights(min(len(flow), len(kernel.table))))
+    else:
+        T = len(flow)
+        band = np.zeros((T, T))
+        for s in range(T):
+            band[s:, s] = kernel.from_vintage(s, T - s)
+        y = band @ flow
     for start, columns, count in _starts(o, len(flow)):
-        y[start + 1 :, columns] += kernel.remainder(growth[columns], count) * opening[columns]
+        y[start + 1 :, columns] += kernel.remainder(growth[columns], count, start) * opening[columns]
     return y
 
 

@@ -98,7 +98,7 @@ _STEP = 1e-30
 
 @dataclass(frozen=True, eq=False)
 class Each:
-    """y = f(x1, x2, ..., p1, p2, ...), pointwise, with parameters p of shape (N,), one per series.
+    """y = f(x1, x2, ..., p1, p2, ...), pointwise, with parameters p of shape (N,), one per series, or (T, N).
 
     `f` must be analytic in x: no abs, max or branches (use `Either`).
     """
@@ -130,12 +130,13 @@ class Each:
     def terms(self, x: Sequence[F8], at: tuple[int, int]) -> Iterator[Term]:
         row, column = at
         point = [np.asarray(v[row, column]) for v in x]
-        slopes = self._slopes(point, [p[column] for p in self.parameters])
+        slopes = self._slopes(point, [p[row, column] if p.ndim > 1 else p[column] for p in self.parameters])
         for i, (v, s) in enumerate(zip(point, slopes, strict=True)):
             yield Term(i, row, column, float(v), float(s), float(v * s))
 
     def combine(self, x: Sequence[F8], terms: Sequence[Term]) -> float:
-        at = [p[terms[0].column] for p in self.parameters]
+        row, column = terms[0].row, terms[0].column
+        at = [p[row, column] if p.ndim > 1 else p[column] for p in self.parameters]
         return float(self.f(*(np.float64(t.value) for t in terms), *at))
 
 

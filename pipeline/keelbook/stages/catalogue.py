@@ -16,12 +16,14 @@ from keelbook.stages import (
     shares,
     stocks,
     totals,
+    valuation,
 )
 from keelbook.stages.base import Stage
 
 STAGES: tuple[Stage[Any], ...] = (
     deflation.STAGE,
     stocks.STAGE,
+    valuation.STAGE,
     labour.STAGE,
     income.STAGE,
     services.STAGE,

@@ -15,7 +15,13 @@ from keelbook.store.generations import EVIDENCE, PANEL
 
 SAMPLE = 100
 
-NOT_IN_DEMO = {"aggregation_discrepancy", "average_age", "holding_gains", "other_volume_changes"}
+NOT_IN_DEMO = {
+    "aggregation_discrepancy",
+    "gross_volume_changes",
+    "investment_indicator",
+    "other_volume_changes",
+    "surviving_part",
+}
 """Measures that may be delivered or computed, and that the demo does not have."""
 
 CHAINED = {

@@ -290,3 +290,68 @@ def test_shipped_rules_repeat_the_rows_they_name() -> None:
         )
     geometric = [asset for asset, efficiency in without_row if efficiency == "cohort_geometric"]
     assert geometric == ["N11", "N111", "N116"]
+
+
+IN_TIME = (
+    "asset,industry,first_year,applies_to,efficiency,rate,life,b,retirement,discount_rate,"
+    "initial_stock,initial_growth,capital_output_ratio,citation,status"
+)
+
+
+def test_rows_that_hold_from_a_year_on_are_in_the_rule_of_the_asset(tmp_path: Path) -> None:
+    rows = ("N112,_T,1995,stock,cohort_geometric,0.05,,,,,,,", "N112,_T,,,cohort_geometric,0.03,,,,,zero,,")
+    rule = load_asset_rules(office(tmp_path, *rows, header=IN_TIME)).resolve("N112", "C")
+    assert rule is not None
+    given = {parameter.name: (parameter.value, parameter.line) for parameter in rule.parameters()}
+    assert given == {
+        "asset.efficiency": ("cohort_geometric", 3),
+        "asset.rate": (0.03, 3),
+        "asset.initial_stock": ("zero", 3),
+        "asset.applies_to": ("stock", 2),
+        "asset.efficiency@1995": ("cohort_geometric", 2),
+        "asset.rate@1995": (0.05, 2),
+    }
+
+
+@pytest.mark.parametrize(
+    ("rows", "what"),
+    [
+        (["N112,_T,1995,,cohort_geometric,0.05,,,,,,,"], "no row holds before the first year"),
+        (["N112,_T,,stock,cohort_geometric,0.05,,,,,,,"], "applies_to without first_year"),
+        (
+            [
+                "N112,_T,,,cohort_geometric,0.05,,,,,,,",
+                "N112,_T,1990,stock,cohort_geometric,0.05,,,,,,,",
+                "N112,_T,1995,,cohort_geometric,0.06,,,,,,,",
+            ],
+            "some rows apply to vintages and some to the stock",
+        ),
+        (
+            [
+                "N112,_T,,,hyperbolic,,20,0.5,simultaneous,0.04,,,",
+                "N112,_T,1990,stock,cohort_geometric,0.05,,,,,,,",
+            ],
+            "needs a rate",
+        ),
+        (
+            [
+                "N112,_T,,,cohort_geometric,0.05,,,,,,,",
+                "N112,_T,1990,,cohort_geometric,0.06,,,,,zero,,",
+            ],
+            "'initial_stock' in a row that holds from 1990",
+        ),
+        (
+            ["N112,_T,,,cohort_geometric,0.05,,,,,,,", "N112,_T,1990,,cohort_geometric,0,,,,,,,"],
+            "rate",
+        ),
+        (["N112,_T,,,cohort_geometric,0.05,,,,,capital_output_ratio,,"], "without the ratio"),
+        (["N112,_T,,,cohort_geometric,0.05,,,,,zero,,2.5"], "'capital_output_ratio' contradicts"),
+        (["N112,_T,,,cohort_geometric,0.05,,,,,steady_state,0.02,"], "'initial_growth' contradicts"),
+        (["N112,_T,,,cohort_geometric,0.05,,,,,backcast_growth,-0.05,"], "growth plus depreciation is not"),
+        (["N112,_T,,,cohort_geometric,0.05,,,,,nothing,,"], "initial_stock"),
+    ],
+)
+def test_starts_and_years_that_do_not_go_together(tmp_path: Path, rows: list[str], what: str) -> None:
+    (problem,) = refused(tmp_path, *rows, header=IN_TIME)
+    assert what in problem.what
+    assert problem.place.startswith("line ")

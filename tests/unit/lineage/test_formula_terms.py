@@ -73,6 +73,15 @@ def _investment(rng: np.random.Generator, roles: int) -> Arrays:
     return [x]
 
 
+def _indicator(rng: np.random.Generator, roles: int) -> Arrays:
+    """Investment from different years on, and what it followed before; one series without an indicator."""
+    investment, indicator = _investment(rng, 1)[0], rng.uniform(5, 15, (T, N))
+    investment[3, 5] = 60.0
+    indicator[0, 2] = np.nan
+    indicator[:, 6] = np.nan
+    return [investment, indicator]
+
+
 def _start(rng: np.random.Generator, roles: int) -> Arrays:
     """Fitted investment and growth, one figure a series."""
     investment, growth = np.full((T, N), np.nan), np.full((T, N), np.nan)
@@ -102,6 +111,36 @@ def _benchmark(rng: np.random.Generator, roles: int) -> Arrays:
     return [benchmark, flow, opening, growth]
 
 
+def _from_zero(rng: np.random.Generator, roles: int) -> Arrays:
+    flow, opening, growth = _vintages(rng, 3)
+    return [50 + np.abs(flow), opening / 20, growth]
+
+
+def _two_benchmarks(rng: np.random.Generator, roles: int) -> Arrays:
+    """Two benchmarks after the opening, a delivered change between some of them."""
+    flow, opening, growth = _vintages(rng, 3)
+    flow = 50 + np.abs(flow)
+    benchmark, change = np.full((T, N), np.nan), np.full((T, N), np.nan)
+    for n in range(N):
+        benchmark[n % 4 + 1, n] = rng.uniform(700, 900)
+        benchmark[n % 4 + 5, n] = rng.uniform(700, 900)
+        change[n % 4 + 3, n] = rng.uniform(-40, 40)
+    flow[9, 3] = 60.0
+    change[:, 5] = np.nan
+    return [benchmark, change, flow, opening, growth]
+
+
+def _changes(rng: np.random.Generator, roles: int) -> Arrays:
+    """Losses and gains of some years, an even change in others, one stock that is put to a benchmark."""
+    flow, opening, growth = _vintages(rng, 3)
+    change, even, target = (np.full((T, N), np.nan) for _ in range(3))
+    for n in range(N):
+        change[[n % 4 + 2, n % 4 + 6], n] = rng.uniform(-60, 40, 2)
+    even[5:8, 2] = -7.0
+    target[6, 4] = 500.0
+    return [change, even, target, 50 + np.abs(flow), opening, growth]
+
+
 def _growth(rng: np.random.Generator, roles: int) -> Arrays:
     x = rng.normal(0.02, 0.05, (T, N))
     for n in range(N):
@@ -122,6 +161,11 @@ def _two_bases(rng: np.random.Generator, roles: int) -> Arrays:
     index, earlier = (rng.uniform(0.5, 1.5, (T, N)) for _ in range(2))
     index[:6], earlier[9:] = np.nan, np.nan
     return [index, earlier, *(np.broadcast_to(x[7], (T, N)).copy() for x in (index, earlier))]
+
+
+def _costs(rng: np.random.Generator, roles: int) -> Arrays:
+    """Costs of both signs, and a base."""
+    return [rng.normal(0, 5, (T, N)), rng.uniform(50, 150, (T, N))]
 
 
 MEMBERS = 11
@@ -145,6 +189,11 @@ def _asset(timing: str, mode: str = "pooled", **parameters: Any) -> dict[str, An
     return {"capital.timing": timing, "capital.age_price_mode": mode, **given}
 
 
+def _from_2006(**parameters: Any) -> dict[str, Any]:
+    """Return parameters that hold from 2006 on."""
+    return {f"asset.{name.replace('__', '.')}@2006": value for name, value in parameters.items()}
+
+
 AT_ONCE = {"retirement__distribution": "simultaneous"}
 NORMAL = {
     "retirement__distribution": "truncated_normal",
@@ -160,6 +209,34 @@ ASSETS = (
     _asset("mid", efficiency="hyperbolic", life=5, b=0.5, discount_rate=0.04, **AT_ONCE),
     _asset("end", "by_life", efficiency="hyperbolic", life=30, b=0.75, discount_rate=0.0, **NORMAL),
     _asset("start", age_price="straight_line", life=8.25, discount_rate=0.03, **AT_ONCE),
+    {
+        **_asset("mid", efficiency="cohort_geometric", rate=0.1, gross_life=6, applies_to="stock", **AT_ONCE),
+        **_from_2006(efficiency="cohort_geometric", rate=0.3, gross_life=4, **AT_ONCE),
+    },
+    {
+        **_asset("end", efficiency="hyperbolic", life=7, b=0.5, discount_rate=0.04, **NORMAL),
+        **_from_2006(efficiency="cohort_geometric", rate=0.2, gross_life=3, **AT_ONCE),
+    },
+)
+
+TAXES = tuple(
+    {
+        "services.tax_rate": rate,
+        "services.tax_allowances": 0.8,
+        "services.tax_credit": 0.05,
+        "services.property_tax": rate / 10,
+    }
+    for rate in (0.2, 0.35)
+)
+
+TAXES = tuple(
+    {
+        "services.tax_rate": rate,
+        "services.tax_allowances": 0.8,
+        "services.tax_credit": 0.05,
+        "services.property_tax": rate / 10,
+    }
+    for rate in (0.2, 0.35)
 )
 
 UNITS = ({"source.unit_mult": 3, "measure.unit_mult": 6}, {"source.unit_mult": 0, "measure.unit_mult": 0})
@@ -177,6 +254,9 @@ OPENING = Case(_start, ASSETS)
 BENCHMARK = Case(_benchmark, ASSETS, linear=True)
 TORNQVIST = Case(_stocks_and_costs, linear=True, members=MEMBERS)
 
+WARM_UP = Case(_from_zero, tuple({**a, "capital.warm_up_limit": 0.6} for a in ASSETS), linear=True)
+STARTS = tuple({"capital.backcast_growth": 0.03, **own} for own in ({}, {"asset.initial_growth": -0.01}))
+
 CASES: dict[str, tuple[Case, ...]] = {
     "scaled": (Case(_positive, UNITS, linear=True),),
     "annual": tuple(Case(_quarters, _annual(rule), linear=True) for rule in ("sum", "mean", "end")),
@@ -189,6 +269,27 @@ CASES: dict[str, tuple[Case, ...]] = {
     "year_end_price": (Case(_prices),),
     "log_trend_growth": tuple(Case(_investment, ({"capital.trend_window": n},)) for n in (2, 10)),
     "log_trend_start": tuple(Case(_investment, ({"capital.trend_window": n},)) for n in (2, 10)),
+    "declared_growth": (Case(_investment, STARTS),),
+    "first_year_investment": (Case(_investment, linear=True),),
+    "investment_by_indicator": tuple(
+        Case(_indicator, ({"capital.link_window": n},), linear=True) for n in (1, 4)
+    ),
+    "capital_output_factor": (Case(_positive, ({"asset.capital_output_ratio": 2.5},)),),
+    "opening_of_zero": (LINEAR,),
+    "gross_stock_from_zero": (WARM_UP,),
+    "productive_stock_from_zero": (WARM_UP,),
+    "net_stock_from_zero": (WARM_UP,),
+    "consumption_of_fixed_capital_from_zero": (WARM_UP,),
+    "retirements_from_zero": (WARM_UP,),
+    "benchmark_gap_spread": (Case(_two_benchmarks, ASSETS),),
+    "holding_gains": (PLAIN,),
+    "net_stock_times_age": (VINTAGES,),
+    "average_age": (PLAIN,),
+    "surviving_part": (Case(_changes, ASSETS),),
+    "investment_before_changes": (PLAIN,),
+    "stock_after_changes": (PLAIN,),
+    "loss_after_changes": (PLAIN,),
+    "changes_of_stock": (PLAIN,),
     "gross_stock_steady_state": (OPENING,),
     "productive_stock_steady_state": (OPENING,),
     "net_stock_steady_state": (OPENING,),
@@ -212,7 +313,40 @@ CASES: dict[str, tuple[Case, ...]] = {
         Case(_positive, ({"services.real_rate": 0.04}, {"services.real_rate": 0.0})),
     ),
     "unallocated_income": (LINEAR,),
-    "capital_compensation_without_wear": (PLAIN,),
+    **{
+        f"{measure}_without_{left_out}": (PLAIN,)
+        for measure in ("capital_compensation", "cost_before_return")
+        for left_out in ("wear", "gains", "wear_and_gains")
+    },
+    "cost_before_return": (PLAIN,),
+    "capital_compensation_with_taxes": (PLAIN,),
+    "capital_compensation_floored": (Case(_costs, ({"services.user_cost_floor": 0.02},)),),
+    "opening_asset_base": (PLAIN,),
+    "opening_revaluation": (PLAIN,),
+    "smoothed_price_change": (Case(_gaps, tuple({"services.smoothing_periods": 3} for _ in range(2)), True),),
+    "smoothed_revaluation": (PLAIN,),
+    "loss_of_new_investment": (Case(_positive, ASSETS, linear=True),),
+    "depreciation_of_opening_vintages": (PLAIN,),
+    "at_average_prices": (PLAIN,),
+    "at_previous_year_prices": (PLAIN,),
+    "at_next_year_prices": (PLAIN,),
+    "opening_at_first_price": (PLAIN,),
+    "net_stock_at_historic_cost": (VINTAGES,),
+    "gross_stock_at_historic_cost": (VINTAGES,),
+    "laspeyres_growth": (PLAIN,),
+    "fisher_growth": (PLAIN,),
+    "tornqvist_growth": (TORNQVIST,),
+    "volume_index_chained": (Case(_growth, ({"assembly.reference_year": REFERENCE_YEAR},)),),
+    "chained_volume": (PLAIN,),
+    "aggregation_discrepancy": (LINEAR,),
+    "tax_term": (OF_SHARES,),
+    "declared_tax_term": (Case(_positive, TAXES),),
+    "declared_property_tax": (Case(_positive, TAXES),),
+    "taxed_asset_base": (PLAIN,),
+    "endogenous_real_rate_of_return": (PLAIN,),
+    "endogenous_rate_of_return_after_tax": (PLAIN,),
+    "exogenous_real_rate_of_return": (Case(_positive, ({"services.real_rate": 0.04},)),),
+    "opening_productive_stock": (LINEAR,),
     "at_current_prices": (PLAIN,),
     "at_replacement_cost": (PLAIN,),
     "hours_index": (PLAIN,),

@@ -19,7 +19,9 @@ WITH_LIFE = {**GEOMETRIC, "gross_life": 3.0, **AT_ONCE}
 HYPERBOLIC = {"efficiency": "hyperbolic", "life": 3.0, "b": 0.5, "discount_rate": 0.0, **AT_ONCE}
 
 
-def _params(rules: dict, timing: str = "mid", window: int = 2, initial_stock: str = "steady_state"):
+def _params(
+    rules: dict, timing: str = "mid", window: int = 2, initial_stock: str = "steady_state", **capital
+):
     """rules: asset -> its parameters, for every industry; or (asset, industry) -> them."""
 
     def of(asset: str, industry: str):
@@ -31,6 +33,10 @@ def _params(rules: dict, timing: str = "mid", window: int = 2, initial_stock: st
         made.start,
         trend_window=choice("capital.trend_window", window),
         initial_stock=choice("capital.initial_stock", initial_stock),
+        **{
+            name: choice(f"capital.{name}", value)
+            for name, value in {"assumed_limit": 1.0, **capital}.items()
+        },
     )
     return replace(made, start=start)
 

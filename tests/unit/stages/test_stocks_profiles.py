@@ -28,7 +28,8 @@ def _stocks(*rules: dict, mode: str = "pooled"):
         return tuple(choice(f"asset.{k}", v) for k, v in names[industry].items())
 
     made = params("stocks", assets=of, timing="end", age_price_mode=mode)
-    made = replace(made, start=replace(made.start, trend_window=choice("capital.trend_window", 2)))
+    window, limit = choice("capital.trend_window", 2), choice("capital.assumed_limit", 1.0)
+    made = replace(made, start=replace(made.start, trend_window=window, assumed_limit=limit))
     ones = block("investment_price/rebased/index", {"asset=_T": [1.0] * len(FLOW)})
     year_end = block("investment_price/year_end/year_end", {"asset=_T": [1.0] * len(FLOW)})
     flow = block("investment/deflated/constant", {f"industry={i} asset=N112": FLOW for i in names})
