@@ -59,6 +59,23 @@ NAMED = [
     "labour_share_smoothed",
     "capital_share_smoothed",
     "capital_services_growth",
+    "benchmark_factor",
+    "labour_input_growth",
+    "unallocated_income",
+    "tax_rate",
+    "tax_allowances",
+    "tax_credit",
+    "tax_term",
+    "property_tax_rate",
+    "price_change",
+    "taxed_base",
+    "cost_before_return",
+    "investment_growth",
+    "investment_index",
+    "net_stock_growth",
+    "net_stock_index",
+    "consumption_of_fixed_capital_growth",
+    "consumption_of_fixed_capital_index",
 ]
 
 MULTIPLIERS = {"currency": 6, "hours": 6, "persons": 3}
@@ -85,7 +102,7 @@ def test_price_bases_fit_the_unit(name: str) -> None:
     if measure.unit in ("hours", "persons", "rate", "log_change"):
         assert bases == {"_Z"}
     if measure.unit == "index":
-        assert bases <= {"index", "source_index", "year_end"}
+        assert bases <= {"index", "source_index", "earlier_index", "year_end"}
 
 
 def test_defaults_of_a_dimension_not_given() -> None:
