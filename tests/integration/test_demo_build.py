@@ -177,7 +177,14 @@ def test_only_figures_that_are_one_by_definition_rest_on_no_data(panel: duckdb.D
     rows = panel.execute(
         "select distinct measure, value from panel where observed_part is null order by all"
     ).fetchall()
-    assert {measure for measure, _ in rows} == {"capital_services", "labour_input", "residual_level"}
+    assert {measure for measure, _ in rows} == {
+        "capital_services",
+        "labour_input",
+        "residual_level",
+        "investment_index",
+        "net_stock_index",
+        "consumption_of_fixed_capital_index",
+    }
     assert {value for _, value in rows} == {1.0}
 
 
@@ -224,7 +231,8 @@ def test_exactly_one_method_is_chosen_for_a_key(panel: duckdb.DuckDBPyConnection
     ).fetchall()
     # Opening stocks lie before the first year of the stocks. An index on its earlier base lives on in the linked one.
     stocks = [(f"{name}_stock", "constant") for name in ("gross", "net", "productive")]
-    assert sorted(without) == sorted([*stocks, ("investment_price", "earlier_index")])
+    historic = [("gross_stock", "historic"), ("net_stock", "historic")]
+    assert sorted(without) == sorted([*stocks, *historic, ("investment_price", "earlier_index")])
     years = panel.execute(
         f"select distinct time_period from (select {key} from panel where measure like '%_stock' group by {key} "
         "having not bool_or(chosen))"

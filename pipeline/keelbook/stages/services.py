@@ -738,7 +738,7 @@ def _negative_income(income: Block, scopes: SeriesIndex) -> list[dict[str, Any]]
 
 
 def _rate_gaps(book: Book, assets: _Assets, params: ServicesParams) -> list[dict[str, Any]]:
-    """Return a finding where the real rate in the age-price profiles is far from the one that was found.
+    """Return a finding per area in which real rates of the age-price profiles are far from those that were found.
 
     The rate found is made real with the price changes of the assets themselves, (1 + r) / (1 + H / B) - 1, because
     an age-price profile compares values of one asset at the prices of one date.
@@ -757,29 +757,35 @@ def _rate_gaps(book: Book, assets: _Assets, params: ServicesParams) -> list[dict
     ]
     discount = np.array(of_set)[assets.net.origin.set]
     at = rate.series.locate(assets.net.series.projected(assets.scope))
-    out = []
-    for n in range(len(rate.series)):
+    worst: dict[int, tuple[float, int, str]] = {}
+    count: dict[int, int] = {}
+    for n, area in enumerate(rate.series.digit("area").tolist()):
         found = real[np.isfinite(real[:, n]), n]
         declared = np.unique(discount[(at == n) & np.isfinite(discount)])
         if not len(found) or not len(declared):
             continue
         mean = float(found.mean())
-        far = declared[np.argmax(np.abs(declared - mean))]
-        if abs(far - mean) > params.discount_rate_gap.value:
-            out.append(
-                note(
-                    "discount_rate_gap",
-                    "note",
-                    "net and productive stocks rest on another real rate than the one found",
-                    rate.series.table,
-                    int(rate.series.key[n]),
-                    measure="rate_of_return",
-                    found=f"a real rate of {mean:.4f} on average, {far:g} in the age-price profiles",
-                    expected=f"a gap of at most {params.discount_rate_gap.value:g}",
-                    remedy="set discount_rate of the assets near the rate found, or accept the difference",
-                )
-            )
-    return out
+        far = float(declared[np.argmax(np.abs(declared - mean))])
+        gap = abs(far - mean)
+        if gap > params.discount_rate_gap.value:
+            count[area] = count.get(area, 0) + 1
+            said = f"a real rate of {mean:.4f} on average, {far:g} in the age-price profiles"
+            worst[area] = max(worst.get(area, (0.0, n, "")), (gap, n, said), key=lambda one: one[0])
+    return [
+        note(
+            "discount_rate_gap",
+            "note",
+            f"net and productive stocks rest on another real rate than the one found, for {count[area]} rates of "
+            "return; the widest gap is told",
+            rate.series.table,
+            int(rate.series.key[n]),
+            measure="rate_of_return",
+            found=said,
+            expected=f"a gap of at most {params.discount_rate_gap.value:g}",
+            remedy="set discount_rate of the assets near the rate found, or accept the difference",
+        )
+        for area, (_, n, said) in worst.items()
+    ]
 
 
 def _in_scope(block: Block, scopes: SeriesIndex, scope: Mapping[str, str]) -> F8:

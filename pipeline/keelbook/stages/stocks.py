@@ -16,7 +16,7 @@ from keelbook.lineage.volume_changes import surviving
 from keelbook.methods.initial_stock import half_life, half_life_of_part
 from keelbook.methods.valuation import holding_gains
 from keelbook.stages.base import CHOSEN, Book, Inputs, Result, Stage, keys, missing_input, note
-from keelbook.stages.deflation import by_edges, price_edges
+from keelbook.stages.deflation import DEFLATED, by_edges, price_edges
 from keelbook.stages.starting_stock import (
     EVEN_CHANGE,
     FROM_ZERO,
@@ -236,6 +236,8 @@ def run(inputs: Inputs, params: StocksParams) -> Result:
     blocks.extend(begin.blocks)
     changes, problems = _changes(inputs, investment, params)
     findings.extend(problems)
+    if changes is not None and changes.key.method == "deflated":
+        blocks.append(changes)
     work = _Work(investment, sets, which, begin, params)
     changed, extra, problems = _changed(work, changes, benchmarks)
     findings.extend(problems)
@@ -324,11 +326,31 @@ def _for_start(
     return StartInputs(benchmarks, read, inputs.get(BlockKey("value_added", CHOSEN, "constant")))
 
 
+CURRENT_CHANGES = BlockKey("other_volume_changes", "delivered", "current")
+
+
 def _changes(
     inputs: Inputs, investment: Block, params: StocksParams
 ) -> tuple[Block | None, list[dict[str, Any]]]:
-    """Return the delivered other volume changes at reference-year prices, and a finding for each without a stock."""
+    """Return the delivered other volume changes at reference-year prices, and a finding for each without a stock.
+
+    Those delivered at current prices are deflated as investment is, where none are delivered at constant prices.
+    """
     block = inputs.get(BlockKey("other_volume_changes", "delivered", "constant"))
+    current, price = inputs.get(CURRENT_CHANGES), inputs.get(BlockKey("investment_price", CHOSEN, "index"))
+    if block is None and current is not None and price is not None:
+        block = derive(
+            DEFLATED,
+            BlockKey("other_volume_changes", "deflated", "constant"),
+            current.series,
+            current.periods,
+            {
+                "current": given(current),
+                "price": by_edges(price, price_edges(current.series, price, params.deflation_order.value)),
+            },
+            sets=((params.deflation_order,),),
+            part=current.part,
+        )
     if block is None:
         return None, []
     stray = (investment.series.locate(block.series.key) < 0) & block.part & block.held
@@ -450,12 +472,9 @@ def _changed(
             )
         ]
         if measure in CHANGE_OF:
-            delivered = before.series.locate(
-                np.array([], np.int64) if changes is None else changes.series.key
-            )
             chosen = np.ones(len(before.series), bool)
             if measure == "net_stock":
-                chosen[delivered[delivered >= 0]] = False
+                chosen = _missing_in(changes, before.series)
             blocks.append(
                 derive(
                     CHANGES_OF_STOCK,
@@ -929,6 +948,7 @@ def _valued(
                     block.periods,
                     {"volume": given(block), "price": by_edges(price, edges)},
                     sets=((params.deflation_order,),),
+                    chosen=_missing_in(inputs.get(CURRENT_CHANGES), block.series),
                     part=block.part,
                 )
             )
@@ -952,6 +972,12 @@ def _valued(
         )
     )
     return out, []
+
+
+def _missing_in(block: Block | None, series: SeriesIndex) -> B1:
+    """Return which series a block does not hold."""
+    at = np.full(len(series), -1) if block is None else block.series.locate(series.key)
+    return np.asarray(at < 0)
 
 
 def _unbalanced_at_prices(inputs: Inputs, work: _Work, valued: Sequence[Block]) -> list[dict[str, Any]]:
@@ -1007,6 +1033,7 @@ STAGE = Stage(
         "investment_price/year_end/year_end",
         *(f"{m}/delivered/{basis}" for m in STOCKS for basis in ("constant", "year_end")),
         "other_volume_changes/delivered/constant",
+        "other_volume_changes/delivered/current",
         "investment_indicator/*/_Z",
         "value_added/*/constant",
     ),
@@ -1017,6 +1044,7 @@ STAGE = Stage(
         "other_volume_changes/benchmark_gap/constant",
         "other_volume_changes/of_vintages/constant",
         "other_volume_changes/of_vintages/current",
+        "other_volume_changes/deflated/constant",
         "gross_volume_changes/of_vintages/constant",
         "holding_gains/perpetual_inventory/current",
         "vintage_ages/perpetual_inventory/constant",

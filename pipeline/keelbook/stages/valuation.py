@@ -39,6 +39,9 @@ PRICE = BlockKey("investment_price", CHOSEN, "index")
 CHAINED = ("investment", "net_stock", "consumption_of_fixed_capital")
 """Measures of which aggregates are chained."""
 
+SHOWN = "net_stock"
+"""The measure whose discrepancy is the chosen one; those of the others stand beside it under their own method."""
+
 AT_HISTORIC_COST = ("net_stock", "gross_stock")
 
 DIMENSIONS = ("sector", "industry", "asset")
@@ -320,6 +323,7 @@ def _chain(
         series,
         periods,
         {"chained_volume": given(level), "sum_of_parts": given(volume)},
+        chosen=measure == SHOWN,
         part=False,
     )
     return [growth, index, level, gap], _broken(measure, volume, level)

@@ -16,11 +16,18 @@ from keelbook.store.generations import EVIDENCE, PANEL
 SAMPLE = 100
 
 NOT_IN_DEMO = {
-    "aggregation_discrepancy",
     "gross_volume_changes",
     "investment_indicator",
     "other_volume_changes",
     "surviving_part",
+    "tax_rate",
+    "tax_allowances",
+    "tax_credit",
+    "tax_term",
+    "property_tax_rate",
+    "price_change",
+    "taxed_base",
+    "cost_before_return",
 }
 """Measures that may be delivered or computed, and that the demo does not have."""
 
@@ -29,6 +36,7 @@ CHAINED = {
     "labour_input_chained",
     "residual_level_log",
     "residual_level_discrete",
+    "volume_index_chained",
 }
 """Formulas that are 1 by definition in one year, and have no terms there."""
 

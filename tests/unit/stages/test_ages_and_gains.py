@@ -73,6 +73,19 @@ def test_the_account_at_current_prices_closes():
     assert gains[3] == pytest.approx(640 * 1.4 - 780 - 1.5 * (100 - 60), rel=1e-12)
 
 
+def test_changes_delivered_at_current_prices_are_deflated_as_investment_is():
+    """480 at the prices of 2012, 1.2, are 400."""
+    book, findings = _at_prices(
+        block("other_volume_changes/delivered/current", {A: [NAN, NAN, -480.0, NAN, NAN]})
+    )
+    assert not findings
+    net = column(get(book, "net_stock/perpetual_inventory/constant"), A)
+    np.testing.assert_allclose(net[1:], [1000, 600, 640, 676], rtol=1e-12)
+    booked = get(book, "other_volume_changes/of_vintages/current")
+    assert column(booked, A)[2] == pytest.approx(-480, rel=1e-12)
+    assert not booked.chosen.any()
+
+
 def test_gains_of_industries_add_up():
     book, _ = _at_prices()
     gains = get(book, "holding_gains/perpetual_inventory/current")
