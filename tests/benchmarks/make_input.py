@@ -136,14 +136,6 @@ worker_group = "workers"
 [source.codes.worker_group]
 "employees" = "SAL"
 "self-employed" = "SELF"
-
-[rules.valuation.price_bases]
-value = []
-citation = "the bare script values volumes at prices of the reference year and of the year's end only"
-
-[rules.valuation.chaining]
-value = "none"
-citation = "the bare script adds parts up, it does not chain"
 """
 
 

@@ -66,7 +66,17 @@ def test_closing_is_opening_plus_investment_less_loss(take: Take, stock: str, lo
     steady = steady[~steady.index.isin(benchmark.index)]
     opening = pd.concat([before(closing), before(steady), before(benchmark)])
     flow = take("investment", "constant")
-    expected = opening + flow - lost
+    changed = take(
+        f"{'other' if stock == 'net_stock' else 'gross'}_volume_changes", "constant", "of_vintages"
+    )
+    changes = changed.reindex(closing.index).fillna(0.0)
+    # What the flood took is stored for the series it hit; for the sums over it both sides are made here.
+    hit = changed.index[changed != 0]
+    assert len(hit) == 1
+    above = [key for key in closing.index if key[3:] == hit[0][3:] and key != hit[0] and key[0] == hit[0][0]]
+    summed = [key for key in above if key[1] in ("S1", hit[0][1]) and key[2] in ("_T", hit[0][2])]
+    changes.loc[summed] = float(changed[hit[0]])
+    expected = opening + flow - lost + changes
     size = opening.abs() + flow.abs() + lost.abs()
     agree(closing, expected, size, 35 * 40)
     first = closing[closing.index.get_level_values("year") == 1985]

@@ -243,7 +243,7 @@ def test_screen_reads_and_writes_nothing(copy_fixture: Callable[[str, Path], Pat
     folder = copy_fixture("demo", tmp_path / "demo")
     before = sorted(folder.rglob("*"))
     result = reply("screen", folder)
-    assert sum(row["cells"] for row in result["sources"]) == 19113
+    assert sum(row["cells"] for row in result["sources"]) == 19114
     assert {row["rule"] for row in result["findings"]} == {
         "coverage", "growth_jump", "hours_per_person", "series_break", "sign_income"
     }  # fmt: skip

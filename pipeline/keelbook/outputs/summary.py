@@ -11,6 +11,9 @@ from keelbook.audit.reading import Build
 from keelbook.outputs.decomposition import averages
 from keelbook.outputs.text import percent, plural, shown
 
+ON_REQUEST = ("valuation",)
+"""Stages that give nothing unless the assembly asks for it: no news if they do not."""
+
 SHOWN_FINDINGS = 3
 WIDTH = 120
 """Characters shown of a finding; `keelbook screen` and the table `finding` have it in full."""
@@ -18,6 +21,7 @@ WORDS = {
     "harmonise": "delivered figures in one unit, frequency and reference year",
     "deflation": "investment volumes and year-end prices",
     "stocks": "gross, productive and net stocks, consumption, retirements",
+    "valuation": "other price bases and chained aggregates",
     "labour": "labour input",
     "income": "labour and capital income and shares, every method",
     "services": "rates of return, user costs, capital services",
@@ -48,7 +52,9 @@ def summary(report: Report, place: Path) -> list[str]:
         if row["stage"] in WORDS and row["figures"]:
             lines.append(f"{'Built':<10} {row['figures']:>11,} figures  {WORDS[str(row['stage'])]}")
     lines += [
-        f"Not built  {WORDS[s]}: {_why(report.findings, s)}" for s in WORDS if not _figures(report.stages, s)
+        f"Not built  {WORDS[s]}: {_why(report.findings, s)}"
+        for s in WORDS
+        if s not in ON_REQUEST and not _figures(report.stages, s)
     ]
     lines += _findings(report.findings)
     lines += _growth(report)

@@ -16,10 +16,7 @@ from keelbook.store.generations import EVIDENCE, PANEL
 SAMPLE = 100
 
 NOT_IN_DEMO = {
-    "gross_volume_changes",
     "investment_indicator",
-    "other_volume_changes",
-    "surviving_part",
     "tax_rate",
     "tax_allowances",
     "tax_credit",
