@@ -31,6 +31,8 @@ THOUSAND = 1000
 """Hours are delivered in thousands and published in millions."""
 TIME_BLOCK = 20
 """Years in one block of a matrix product: its empty corner is skipped."""
+NEW = 0.5
+"""Age at the end of the year of what was invested in it."""
 
 
 def parameter(file: str, name: str) -> Any:
@@ -146,7 +148,7 @@ def lives(mean: float) -> list[tuple[int, float]]:
 
 def survival(mean: float) -> F8:
     """Return what is left of a vintage v and a half years old, for simultaneous retirement."""
-    ages = np.arange(lives(mean)[-1][0] + 1) + 0.5
+    ages = np.arange(lives(mean)[-1][0] + 1) + NEW
     return np.asarray(sum(mass * (ages < one) for one, mass in lives(mean)), np.float64)
 
 
@@ -163,7 +165,7 @@ def hyperbolic(rule: Mapping[str, str]) -> tuple[F8, F8]:
     for age in range(len(price) - 2, -1, -1):
         price[age] += price[age + 1] / (1 + rho)
     price /= price[0]
-    return cohort(ages[:-1] + 0.5), (price[:-1] + price[1:]) / 2
+    return cohort(ages[:-1] + NEW), (price[:-1] + price[1:]) / 2
 
 
 def vintages(flow: F8, weights: Sequence[F8], growth: F8, start: F8) -> list[tuple[F8, F8]]:
@@ -192,15 +194,18 @@ def vintages(flow: F8, weights: Sequence[F8], growth: F8, start: F8) -> list[tup
     return out
 
 
-def geometric(flow: F8, rate: float, growth: F8, start: F8) -> tuple[F8, F8]:
-    """Return (opening, stock by year) of a cohort with a constant rate, mid-year."""
+def geometric(flow: F8, rate: float, growth: F8, start: F8) -> tuple[tuple[F8, F8], tuple[F8, F8]]:
+    """Return (opening, by year) of a cohort with a constant rate, mid-year: its stock, and its stock times age."""
     opening = (1 - rate / 2) * start / (growth + rate)
     stock = (1 - rate / 2) * flow
-    before = opening
-    for now in stock:
+    opening_aged = opening * (NEW + (1 - rate) / (growth + rate))
+    aged = NEW * stock
+    before, older = opening, opening_aged
+    for now, old in zip(stock, aged, strict=True):
         now += (1 - rate) * before
-        before = now
-    return opening, stock
+        old += (1 - rate) * (before + older)  # all that is left is a year older
+        before, older = now, old
+    return (opening, stock), (opening_aged, aged)
 
 
 def trend(flow: F8) -> tuple[F8, F8]:
@@ -214,20 +219,22 @@ def trend(flow: F8) -> tuple[F8, F8]:
 
 
 def stocks(asset: str, flow: F8, growth: F8, start: F8) -> dict[str, tuple[F8, F8]]:
-    """Return (opening, by year) of the stocks of one asset, (A, J) and (T, A, J)."""
+    """Return (opening, by year) of the stocks of one asset and of its net stock times age, (A, J) and (T, A, J)."""
     out: dict[str, tuple[F8, F8]] = {}
     for members, rule in by_rule(asset):
         x = np.ascontiguousarray(flow[:, :, members]).reshape(len(flow), -1)
         g, i = growth[:, members].ravel(), start[:, members].ravel()
         if rule["efficiency"] == "cohort_geometric":
-            net = geometric(x, float(rule["rate"]), g, i)  # its age-price profile is its efficiency
-            made = {"productive_stock": net, "net_stock": net}
+            net, aged = geometric(x, float(rule["rate"]), g, i)
+            made = {"productive_stock": net, "net_stock": net}  # its age-price profile is its efficiency
+            made["vintage_ages"] = aged
             if rule["gross_life"]:
                 made["gross_stock"] = vintages(x, [survival(float(rule["gross_life"]))], g, i)[0]
         else:
             productive, price = hyperbolic(rule)
-            weights = [survival(float(rule["life"])), productive, price]
-            names = ("gross_stock", "productive_stock", "net_stock")
+            gross, ages = survival(float(rule["life"])), np.arange(len(price)) + NEW
+            weights = [gross, productive, price, price * ages]
+            names = ("gross_stock", "productive_stock", "net_stock", "vintage_ages")
             made = dict(zip(names, vintages(x, weights, g, i), strict=True))
         for name, (opening, stock) in made.items():
             whole = out.setdefault(name, (np.empty(growth.shape), np.empty(flow.shape)))
@@ -290,6 +297,7 @@ def capital(files: Files) -> dict[str, Any]:
         files.put("trend_growth/log_linear_trend/_Z", growth[None], axes, -1)
         files.put("trend_investment/log_linear_trend/constant", start[None], axes, -1)
         held = stocks(asset, flow, growth, start)
+        _, aged = held.pop("vintage_ages")
         lost = {}
         for name, (opening, stock) in held.items():
             files.put(f"{name}/steady_state/constant", opening[None], axes, -1)
@@ -305,18 +313,26 @@ def capital(files: Files) -> dict[str, Any]:
                     files.put(f"{loss}/perpetual_inventory/{basis}", values, axes)
                     sums.add(f"{loss}/perpetual_inventory/{basis}", asset, values)
         net, productive = held["net_stock"][1], held["productive_stock"][1]
+        files.put("vintage_ages/perpetual_inventory/constant", aged, axes)
+        files.put("average_age/perpetual_inventory/constant", aged / net, axes)
+        holding = net[:-1] * (p[1:] - pe[:-1]) + net[1:] * (pe[1:] - p[1:])
         base = p[1:] * (net[1:] + net[:-1]) / 2
         gain = (pe[1:] / pe[:-1] - 1) * base
         average = (productive[1:] + productive[:-1]) / 2
         files.put("productive_stock_average/average/constant", average, axes, 1)
-        for key, values in (("asset_base/average/current", base), ("revaluation/actual/current", gain)):
+        for key, values in (
+            ("holding_gains/perpetual_inventory/current", holding),
+            ("asset_base/average/current", base),
+            ("revaluation/actual/current", gain),
+        ):
             files.put(key, values, axes, 1)
             sums.add(key, asset, values)
         kept["base"].append(base)
         kept["gain"].append(gain)
         kept["average"].append(average)
         kept["loss"].append((lost["net_stock"] * p)[1:])
-    sums.put(files, {"asset_base/average/current": 1, "revaluation/actual/current": 1})
+    late = ("holding_gains/perpetual_inventory", "asset_base/average", "revaluation/actual")
+    sums.put(files, {f"{key}/current": 1 for key in late})
     return {**kept, "sums": sums.industries}
 
 

@@ -17,6 +17,7 @@ FLOWS = {key: list(RNG.uniform(20, 90, YEARS)) for key in KEYS}
 NET = {key: list(RNG.uniform(300, 900, YEARS)) for key in KEYS}
 PRICES = {"asset=N112": [0.7, 1.0, 1.2, 1.5, 1.4, 1.9], "asset=N113": [1.2, 1.0, 0.8, 0.7, 0.5, 0.4]}
 ALL = "industry=_T asset=_T"
+ALL_BASES = ("current", "previous_year", "historic")
 
 
 def _whole(key: str, rows: dict[str, list[float]]) -> list[Block]:
@@ -27,7 +28,7 @@ def _whole(key: str, rows: dict[str, list[float]]) -> list[Block]:
 def _run(*extra: Block, prices=None, flows=None, **changes):
     return run_stage(
         valuation.STAGE,
-        params("valuation", **changes),
+        params("valuation", **{"price_bases": ALL_BASES, "chaining": "laspeyres", **changes}),
         *_whole("investment/deflated/constant", flows or FLOWS),
         *_whole("net_stock/delivered/constant", NET),
         block("investment_price/rebased/index", prices or PRICES, first=FIRST),
@@ -120,7 +121,9 @@ def test_a_chain_that_breaks_is_told():
 
 def test_without_prices_it_says_so():
     _, findings = run_stage(
-        valuation.STAGE, params("valuation"), *_whole("net_stock/delivered/constant", NET)
+        valuation.STAGE,
+        params("valuation", price_bases=ALL_BASES, chaining="laspeyres"),
+        *_whole("net_stock/delivered/constant", NET),
     )
     assert rules_of(findings) == ["not_computed"]
 
@@ -140,7 +143,9 @@ def _built(prices: dict[str, list[float]]) -> tuple[Book, list[dict[str, object]
     year_end = block("investment_price/year_end/year_end", prices, first=first, part=False)
     made, _ = run_stage(stocks.STAGE, params("stocks"), flow, price, year_end)
     blocks = [*made, flow, price]
-    book, findings = run_stage(valuation.STAGE, params("valuation", chaining="none"), *blocks)
+    book, findings = run_stage(
+        valuation.STAGE, params("valuation", price_bases=ALL_BASES, chaining="none"), *blocks
+    )
     return Book([*made, *book]), findings
 
 
@@ -188,5 +193,7 @@ def test_a_delivered_stock_has_no_historic_cost_and_it_is_told():
     )
     land = block("net_stock/delivered/constant", {"industry=A asset=N11": [5.0] * LONG}, first=first)
     made, _ = run_stage(stocks.STAGE, params("stocks"), flow, price, year_end, land)
-    _, findings = run_stage(valuation.STAGE, params("valuation", chaining="none"), *made, flow, price, land)
+    _, findings = run_stage(
+        valuation.STAGE, params("valuation", price_bases=ALL_BASES, chaining="none"), *made, flow, price, land
+    )
     assert [(f["rule"], f["asset"]) for f in findings] == [("no_historic_cost", "N11")]
