@@ -5,6 +5,7 @@ import os
 import socket
 import time
 from collections.abc import Callable, Sequence
+from concurrent.futures import Future, ThreadPoolExecutor
 from dataclasses import dataclass, replace
 from pathlib import Path
 from typing import Any
@@ -26,7 +27,7 @@ from keelbook.errors import Problem, StopFindings
 from keelbook.frames import coded, constant
 from keelbook.stages import panel
 from keelbook.stages.acceptances import accept
-from keelbook.stages.base import Book, Inputs
+from keelbook.stages.base import Book, Inputs, Stage
 from keelbook.stages.catalogue import STAGES
 from keelbook.stages.harmonise import ObservedBlock, harmonise, observed_blocks
 from keelbook.stages.intake import Intake, source_paths, take_in
@@ -244,34 +245,51 @@ def _build(
     by_stage = plan.stage_params(assembly, parameters)
     book = Book(delivered.blocks)
     batches = _batches(list(book))
-    for number, (first, last) in enumerate(batches, 1):
-        mine = Book(block.take(_slice(block.series, first, last)) for block in book)
-        _count(tally["harmonise"], list(mine))
-        for stage in STAGES:
-            if not all(mine.get(key) is not None for key in stage.needs):
-                continue
-            result = stage.run(Inputs(mine, stage.needs, stage.optional), by_stage[stage.name])
-            given = {block.key for block in result.blocks}
-            if not given <= stage.gives:
-                raise RuntimeError(
-                    f"stage {stage.name} gave {given - stage.gives}, which it does not declare"
-                )
-            mine.add(result.blocks)
-            _count(tally[stage.name], result.blocks)
-            tally[stage.name][2] += len(result.findings)
-            found.append(findings.frame(result.findings))
-        writer.write(mine)
-        for name, frame in (
-            ("decomposition_input", panel.inputs_of(mine)),
-            ("decomposition", panel.decomposition_of(mine)),
-        ):
-            if len(frame):
-                writer.insert(name, frame)
-        log.step(f"computed and wrote areas, batch {number} of {len(batches)}")
+    # One batch is written while the next one is computed: a single writer, so that the order stays.
+    with ThreadPoolExecutor(max_workers=1) as pool:
+        written: Future[None] | None = None
+        for number, (first, last) in enumerate(batches, 1):
+            mine = Book(block.take(_slice(block.series, first, last)) for block in book)
+            _count(tally["harmonise"], list(mine))
+            for stage in STAGES:
+                _run_stage(stage, mine, by_stage[stage.name], tally[stage.name], found)
+            if written is not None:
+                written.result()
+            written = pool.submit(_write_batch, writer, mine)
+            log.step(f"computed areas, batch {number} of {len(batches)}")
+        if written is not None:
+            written.result()
     return [
         (position, name, series, figures, count, "")
         for position, (name, (series, figures, count)) in enumerate(tally.items(), 1)
     ]
+
+
+def _run_stage(
+    stage: Stage[Any], book: Book, params: Any, tally: list[int], found: list[pd.DataFrame]
+) -> None:
+    """Run one stage on a book, add what it gives, and hold it to what it declares."""
+    if not all(book.get(key) is not None for key in stage.needs):
+        return
+    result = stage.run(Inputs(book, stage.needs, stage.optional), params)
+    given = {block.key for block in result.blocks}
+    if not given <= stage.gives:
+        raise RuntimeError(f"stage {stage.name} gave {given - stage.gives}, which it does not declare")
+    book.add(result.blocks)
+    _count(tally, result.blocks)
+    tally[2] += len(result.findings)
+    found.append(findings.frame(result.findings))
+
+
+def _write_batch(writer: Writer, book: Book) -> None:
+    """Write everything of one batch: series, figures, and the rows of the two wide tables."""
+    writer.write(book)
+    for name, frame in (
+        ("decomposition_input", panel.inputs_of(book)),
+        ("decomposition", panel.decomposition_of(book)),
+    ):
+        if len(frame):
+            writer.insert(name, frame)
 
 
 BATCH = 2000
